@@ -1,0 +1,1 @@
+"""The plugin: start-up, provider and everything behind the algorithms."""

@@ -1,0 +1,1 @@
+"""Physics, geometry and inference on arrays; knows nothing of QGIS."""
