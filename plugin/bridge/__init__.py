@@ -1,0 +1,1 @@
+"""QGIS to arrays and back: rasters, lines, fields, sinks, progress."""
