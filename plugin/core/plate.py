@@ -338,10 +338,7 @@ class Plate:
 
     def solve(self, vector: np.ndarray) -> Bending:
         """Bend the plate under nodal forces ``vector`` of shape (2 n,) or (2 n, loads), all in one call."""
-        vector = np.asarray(vector, dtype=float)
-        if vector.ndim not in (1, 2) or vector.shape[0] != 2 * self.nodes.size:
-            raise DownwarpError(f"vector has shape {vector.shape}; it takes {2 * self.nodes.size} rows.")
-        vector = vector.reshape(vector.shape[0], -1)
+        vector = self._nodal_forces("vector", vector)
         unknowns = self._substitute(vector)
         if self._factored[1] > _REFINE_ABOVE:
             unknowns = self._refine(vector, unknowns)
@@ -355,8 +352,15 @@ class Plate:
         """
         vector = self.load_vector(load, at=at)
         if forces is not None:
-            vector = vector + forces
+            vector = vector + self._nodal_forces("forces", forces)
         return Bending(self, self._refine(vector, self._substitute(vector)), load, at)
+
+    def _nodal_forces(self, name: str, values) -> np.ndarray:
+        """Nodal forces that a caller gave, as columns."""
+        values = check.finite_array(name, values)
+        if values.ndim not in (1, 2) or values.shape[0] != 2 * self.nodes.size:
+            raise DownwarpError(f"{name} has shape {values.shape}; it takes {2 * self.nodes.size} rows.")
+        return values.reshape(values.shape[0], -1)
 
     def _substitute(self, vector: np.ndarray) -> np.ndarray:
         """The unknowns under nodal forces (2 n, loads), by the factor."""
@@ -374,8 +378,6 @@ class Plate:
             size = abs(correction).max()
             if size * size <= _REFINE_TO * top * previous:  # the next correction: size * (size / previous)
                 return unknowns
-            if size > 0.5 * previous:
-                break
             previous = size
         raise self._too_close()
 

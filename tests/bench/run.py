@@ -1,0 +1,157 @@
+"""Benchmarks: `python tests/bench/run.py` prints a Markdown table. Times depend on the machine, so nothing is asserted.
+
+Each function in BENCHMARKS yields rows (what, seconds, ratio or None, note); add a benchmark by adding a function.
+"""
+
+from __future__ import annotations
+
+import os
+import sys
+import timeit
+from collections.abc import Callable, Iterator
+from pathlib import Path
+
+# Small matrices: threads cost more than they bring, and they blur the times. Read when numpy is loaded.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
+
+import conftest  # noqa: F401 - makes the checkout importable
+import numpy as np
+from downwarp_checkout.plugin.core import elastic
+from downwarp_checkout.plugin.core.plate import BROKEN, CLAMPED, Plate
+from scipy.integrate import solve_bvp
+from scipy.linalg.lapack import dpbsv
+
+Row = tuple[str, float, "float | None", str]
+
+STATIONS = 1000
+SPAN = 600e3
+RIGIDITY = float(elastic.Elastic().rigidity(30e3))
+STIFFNESS = float(elastic.restoring_stiffness(3300.0, 1030.0, 9.81))
+SHEAR = 1e12
+
+
+def seconds(call: Callable[[], object], repeats: int = 60, least: float = 0.004) -> float:
+    """Shortest of several timings of ``call``, each long enough for the clock."""
+    timer = timeit.Timer(call)
+    number = 1
+    while timer.timeit(number) < least:
+        number *= 2
+    return min(timer.repeat(repeats, number)) / number
+
+
+def load_at(x: np.ndarray) -> np.ndarray:
+    """A smooth load, Pa, of the size of a seamount."""
+    return 5e7 * np.exp(-(((x - 0.3 * SPAN) / 40e3) ** 2))
+
+
+def forward_solve() -> Iterator[Row]:
+    """One transect: the plate, its load and its deflection, beside LAPACK's band solve of the same matrix."""
+    nodes = np.linspace(0.0, SPAN, STATIONS)
+    load = load_at(nodes)
+    points = (STATIONS - 1, 4)
+    rigidity, stiffness = np.full(points, RIGIDITY), np.full(points, STIFFNESS)
+    plate = Plate(nodes, RIGIDITY, STIFFNESS, 0.0, BROKEN)
+    band, vector = plate.band, plate.load_vector(load)
+
+    def forward() -> np.ndarray:
+        fresh = Plate(nodes, RIGIDITY, STIFFNESS, 0.0, BROKEN)
+        return fresh.solve(fresh.load_vector(load)).deflection
+
+    def forward_varying() -> np.ndarray:
+        fresh = Plate(nodes, rigidity, stiffness, 0.0, BROKEN)
+        return fresh.solve(fresh.load_vector(load)).deflection
+
+    lapack = seconds(lambda: dpbsv(band, vector, lower=1))
+    yield f"LAPACK dpbsv, the matrix of {STATIONS} stations", lapack, 1.0, "the measure of the rows below"
+    for what, call in (
+        ("Plate, load_vector, solve", forward),
+        ("the same, D and k at every Gauss point", forward_varying),
+        ("Plate, bend (refined)", lambda: Plate(nodes, RIGIDITY, STIFFNESS, 0.0, BROKEN).bend(load)),
+        ("solve again with the factor", lambda: plate.solve(vector)),
+    ):
+        taken = seconds(call)
+        yield what, taken, taken / lapack, "of dpbsv"
+
+
+def against_collocation() -> Iterator[Row]:
+    """The same deflection by `scipy.integrate.solve_bvp`, at the loosest tolerance that is as accurate.
+
+    A plate broken at its start under V0 and a smooth load, clamped at its finish. Both are measured at the stations
+    against the plate on half as many elements again under a load sampled 50 times as finely. Of several first meshes,
+    solve_bvp is given the fastest, and both Jacobians.
+    """
+    nodes = np.linspace(0.0, SPAN, STATIONS)
+    load = load_at(nodes)
+    finer = Plate(np.linspace(0.0, SPAN, STATIONS + STATIONS // 2), RIGIDITY, STIFFNESS, 0.0, BROKEN, CLAMPED)
+    fine = np.linspace(0.0, SPAN, 50 * STATIONS)
+    converged = finer.bend(load_at(fine), finer.end_vector(SHEAR), fine).at(nodes)[:, 0]
+
+    def error(deflection: np.ndarray) -> float:
+        return float(abs(deflection - converged).max() / abs(converged).max())
+
+    def forward() -> np.ndarray:
+        plate = Plate(nodes, RIGIDITY, STIFFNESS, 0.0, BROKEN, CLAMPED)
+        return plate.solve(plate.load_vector(load) + plate.end_vector(SHEAR)).deflection[:, 0]
+
+    # In units of alpha, 1000 m and D: y = (w, w', M, V), M = -w'', V = M', V' = 4 w - q.
+    alpha = float(elastic.flexural_parameter(RIGIDITY, STIFFNESS))
+    to_load, to_shear = alpha**4 / (1000.0 * RIGIDITY), alpha**3 / (1000.0 * RIGIDITY)
+    system = np.array([[0.0, 1.0, 0.0, 0.0], [0.0, 0.0, -1.0, 0.0], [0.0, 0.0, 0.0, 1.0], [4.0, 0.0, 0.0, 0.0]])
+    left, right = np.zeros((4, 4)), np.zeros((4, 4))
+    left[0, 2] = left[1, 3] = right[2, 0] = right[3, 1] = 1.0
+
+    def derivatives(s: np.ndarray, y: np.ndarray) -> np.ndarray:
+        return np.stack([y[1], -y[2], y[3], 4.0 * y[0] - load_at(alpha * s) * to_load])
+
+    def jacobian(s: np.ndarray, y: np.ndarray) -> np.ndarray:
+        return np.repeat(system[:, :, None], s.size, axis=2)
+
+    def ends(start: np.ndarray, finish: np.ndarray) -> np.ndarray:
+        return np.array([start[2], start[3] + SHEAR * to_shear, finish[0], finish[1]])
+
+    def collocate(tolerance: float, first: int) -> np.ndarray:
+        mesh = np.linspace(0.0, SPAN / alpha, first)
+        found = solve_bvp(
+            derivatives,
+            ends,
+            mesh,
+            np.zeros((4, first)),
+            fun_jac=jacobian,
+            bc_jac=lambda start, finish: (left, right),
+            tol=tolerance,
+            max_nodes=100000,
+        )
+        return 1000.0 * found.sol(nodes / alpha)[0]
+
+    ours = error(forward())
+    taken = seconds(forward)
+    yield f"forward solve, {STATIONS} stations, end shear", taken, 1.0, f"error {ours:.1e}"
+
+    choices = []
+    for first in (11, 21, 41, 81, 161, 321):
+        for tolerance in 10.0 ** -np.arange(2.0, 12.0, 0.5):
+            theirs = error(collocate(tolerance, first))
+            if theirs <= ours:
+                spent = seconds(lambda n=first, t=tolerance: collocate(t, n), repeats=3)
+                choices.append((spent, first, tolerance, theirs))
+                break
+    spent, first, tolerance, theirs = min(choices)
+    spent = seconds(lambda: collocate(tolerance, first))
+    note = f"error {theirs:.1e} with tol {tolerance:.0e} from {first} nodes; ratio of the row above"
+    yield "solve_bvp, equally accurate", spent, spent / taken, note
+
+
+BENCHMARKS = (forward_solve, against_collocation)
+
+
+def main() -> None:
+    sys.stdout.write("| what | time | ratio | note |\n| --- | ---: | ---: | --- |\n")
+    for benchmark in BENCHMARKS:
+        for what, taken, ratio, note in benchmark():
+            times = "" if ratio is None else f"{ratio:.2f}"
+            sys.stdout.write(f"| {what} | {taken * 1e6:.0f} us | {times} | {note} |\n")
+
+
+if __name__ == "__main__":
+    main()
