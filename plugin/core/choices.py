@@ -1,0 +1,116 @@
+"""How the answer moves with each reasonable choice: the fit repeated under alternatives, one at a time."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from dataclasses import replace
+
+import numpy as np
+
+from .elastic import Elastic
+from .errors import DownwarpError
+from .problem import Problem, prepare
+from .result import ChoiceRow, Estimate, Fit
+from .settings import (
+    BREAK_GIVEN,
+    BROKEN,
+    CONTINUOUS,
+    PLATE_NAMES,
+    REGIONAL_BOW,
+    REGIONAL_LEVEL,
+    FitOptions,
+)
+
+WINDOW_CHANGE = 0.2
+"""Share of the fitted stretch by which the window is shortened, and lengthened where the user had set its end."""
+DENSITY_CHANGE = 100.0
+"""Change of infill and load density, kg/m3."""
+OTHER_YOUNG = {100e9: 70e9}
+"""Young's modulus, Pa, that is common practice beside the one in use; 100 GPa beside any other."""
+REGIONAL_WORDS = ("none", "level", "level and tilt", "level, tilt and bow")
+
+
+def try_choices(
+    problem: Problem, best: Fit, fit_kind: Callable[[Problem, int], Fit], progress: Callable[[float], None]
+) -> tuple[ChoiceRow, ...]:
+    """One row per alternative; the break is held where the answer has it, so that choices differ in one thing only.
+
+    ``fit_kind`` fits one kind of plate to a problem. An alternative that cannot be fitted has a row without values.
+    """
+    rows = [ChoiceRow("as fitted", "", best.thickness, best.rms)]
+    alternatives = list(_alternatives(problem, best))
+    for done, (choice, option, changes) in enumerate(alternatives):
+        progress(done / len(alternatives))
+        kind = changes.pop("plate", best.kind)
+        try:
+            changed = prepare(problem.profile, replace(_held(problem, best), plate=kind, **changes))
+            fit = fit_kind(changed, kind)
+            rows.append(ChoiceRow(choice, option, fit.thickness, fit.rms))
+        except DownwarpError:
+            rows.append(ChoiceRow(choice, option, Estimate(None), None))
+    rows.append(_other_modulus(problem.options.elastic, best))
+    return tuple(rows)
+
+
+def moving_choices(rows: tuple[ChoiceRow, ...], best: Fit) -> tuple[str, ...]:
+    """A remark that names the choices, but for Young's modulus, that move the thickness outside its interval."""
+    low, high = best.thickness.low, best.thickness.high
+    # The first row is the answer itself, the last one the modulus.
+    words = [
+        f"{row.choice}, {row.option}: {row.thickness.value / 1e3:.1f} km"
+        for row in rows[1:-1]
+        if row.thickness.value is not None
+        and ((low is not None and row.thickness.value < low) or (high is not None and row.thickness.value > high))
+    ]
+    return ("choices that move the thickness outside its interval: " + ", ".join(words),) if words else ()
+
+
+def _held(problem: Problem, best: Fit) -> FitOptions:
+    """The options with what was measured or searched fixed at what it came to."""
+    options = replace(problem.options, reference_level=problem.reference_level)
+    if best.break_position.value is not None:
+        options = replace(options, break_at=BREAK_GIVEN, break_position=best.break_position.value)
+    return options
+
+
+def _alternatives(problem: Problem, best: Fit) -> Iterator[tuple[str, str, dict]]:
+    """Choice, option in words, and the options that change."""
+    options, rho = problem.options, problem.densities
+    seen = problem.observations().distance
+    first, last = float(seen.min()), float(seen.max())
+    change = WINDOW_CHANGE * (last - first)
+    yield "window ends sooner", f"FIT_TO {(last - change) / 1e3:.0f} km", {"fit_to": last - change}
+    yield "window begins later", f"FIT_FROM {(first + 0.5 * change) / 1e3:.0f} km", {"fit_from": first + 0.5 * change}
+    end = float(problem.profile.distance[-1])
+    if options.fit_to is not None and options.fit_to < end:
+        further = min(last + change, end)
+        yield "window ends later", f"FIT_TO {further / 1e3:.0f} km", {"fit_to": further}
+    regional = options.chosen("regional")[0]
+    if regional < REGIONAL_BOW:
+        yield "more regional", REGIONAL_WORDS[regional + 1], {"regional": regional + 1}
+    if regional > REGIONAL_LEVEL:
+        yield "less regional", REGIONAL_WORDS[regional - 1], {"regional": regional - 1}
+    for sign, word in ((1, "denser"), (-1, "lighter")):
+        if not problem.bare:
+            density = rho.infill + sign * DENSITY_CHANGE
+            if 0 <= density < rho.mantle:
+                yield f"{word} infill", f"{density:.0f} kg/m3", {"rho_infill": density}
+        if np.any(problem.load):
+            density = rho.load + sign * DENSITY_CHANGE
+            if density > 0:
+                yield f"{word} load", f"{density:.0f} kg/m3", {"rho_load": density}
+    other = CONTINUOUS if best.kind == BROKEN else BROKEN
+    yield "other plate", PLATE_NAMES[other], {"plate": other}
+
+
+def _other_modulus(elastic: Elastic, best: Fit) -> ChoiceRow:
+    """The answer at another Young's modulus: the rigidity stays, so the thickness goes by the modulus' cube root."""
+    young = OTHER_YOUNG.get(elastic.young, 100e9)
+    factor = (elastic.young / young) ** (1 / 3)
+    scaled = Estimate(
+        *(
+            None if value is None else value * factor
+            for value in (best.thickness.value, best.thickness.low, best.thickness.high)
+        )
+    )
+    return ChoiceRow("Young's modulus", f"{young / 1e9:.0f} GPa", scaled, best.rms)

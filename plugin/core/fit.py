@@ -1,0 +1,336 @@
+"""Fits a plate to one transect: thickness and break by their posterior, end forces and regional inside it."""
+
+from __future__ import annotations
+
+import functools
+from collections.abc import Callable
+from dataclasses import replace
+
+import numpy as np
+
+from .bend import bend_problem
+from .choices import moving_choices, try_choices
+from .elastic import flexural_parameter
+from .errors import DownwarpError
+from .forward import TransectModel
+from .posterior import Comparison, Posterior, compare, thickness_posterior
+from .problem import Observations, Problem, prepare
+from .profile import Profile
+from .result import ChoiceRow, Estimate, Fit, FitResult, MisfitRow, Parameter
+from .settings import BOTH, BROKEN, CONTINUOUS, FITTED, GIVEN, LOAD_RELIEF, MEASURED, PLATE_NAMES, FitOptions
+
+LEVEL_ROUNDS = 4
+"""Fits after which the reference level is left as it is."""
+LEAST_SIGMA = 1e-3
+"""Median standard deviation, m, below which it is rounding rather than a measure of error."""
+LEVEL_SETTLED = 2.0
+"""Change of the reference level, m, that no longer matters."""
+
+REGIONAL_NAMES = ("level", "tilt", "bow")
+
+Progress = Callable[[float], None]
+
+
+def fit_profile(
+    profile: Profile, options: FitOptions, progress: Progress | None = None, with_choices: bool = True
+) -> FitResult:
+    """Fit a plate, or both kinds, to a sampled profile.
+
+    ``with_choices``: whether the fit is repeated under each reasonable alternative, which takes some ten fits more.
+    Raises DownwarpError where nothing can be fitted, and whatever ``progress`` raises.
+    """
+    told = progress if progress is not None else _silent
+    tell = functools.partial(_share, told, 0.0, 0.3 if with_choices else 1.0)
+    problem = prepare(profile, options)
+    for part in range(LEVEL_ROUNDS):
+        fits, comparison = _fit_kinds(problem, functools.partial(_share, tell, part / LEVEL_ROUNDS, 1 / LEVEL_ROUNDS))
+        best = fits[0]
+        level = _fitted_level(problem, best)
+        if level is None or abs(level - (problem.reference_level or 0.0)) < LEVEL_SETTLED:
+            break
+        if part + 1 < LEVEL_ROUNDS:
+            problem = replace(
+                prepare(profile, replace(options, reference_level=level)), options=options, reference_origin=FITTED
+            )
+    choices: tuple[ChoiceRow, ...] = ()
+    if with_choices:
+        choices = try_choices(problem, best, fit_kind, functools.partial(_share, told, 0.3, 0.7))
+    told(1.0)
+    remarks = list(problem.remarks) + list(best.remarks) + list(best.bent.remarks)
+    parameters = parameters_in_use(problem, best)
+    if comparison is not None:
+        remarks.append(comparison.remark)
+        parameters += (Parameter("log_odds_of_continuous_plate", comparison.log_odds, "1", FITTED),)
+    remarks += moving_choices(choices, best)
+    return FitResult(best, parameters, tuple(fits), choices, tuple(dict.fromkeys(remarks)))
+
+
+def _fit_kinds(problem: Problem, tell: Progress) -> tuple[list[Fit], Comparison | None]:
+    """Fits of the kinds of plate asked for, the better first, and how they compare where both were."""
+    kind = problem.options.chosen("plate")[0]
+    if kind != BOTH:
+        return [fit_kind(problem, kind, tell)], None
+    fits, posteriors = [], []
+    for place, each in enumerate((CONTINUOUS, BROKEN)):
+        fit, posterior = _fit_with_posterior(problem, each, functools.partial(_share, tell, 0.5 * place, 0.5))
+        fits.append(fit)
+        posteriors.append(posterior)
+    names = f"a {PLATE_NAMES[CONTINUOUS]} plate", f"a {PLATE_NAMES[BROKEN]} plate"
+    comparison = compare(posteriors[0], posteriors[1], names)
+    return (fits if comparison.log_odds >= 0 else fits[::-1]), comparison
+
+
+def _fitted_level(problem: Problem, fit: Fit) -> float | None:
+    """Regional level, m up, at the middle of the load, where it says better than the relief outside the load from where
+    on relief is load: the moat is part of that relief. None where the user gave the level, or none is needed."""
+    if problem.reference_origin == GIVEN or not problem.bare or not problem.under_load.any():
+        return None
+    if problem.options.chosen("load")[0] != LOAD_RELIEF or not fit.bent.regional[0]:
+        return None
+    middle = float(np.average(problem.profile.distance, weights=np.abs(problem.load)))
+    return sum(c * middle**power for power, c in enumerate(fit.bent.regional))
+
+
+def _silent(fraction: float) -> None:
+    return None
+
+
+def _share(tell: Progress, start: float, part: float, fraction: float) -> None:
+    tell(start + part * fraction)
+
+
+def fit_kind(problem: Problem, kind: int, progress: Progress = _silent) -> Fit:
+    """Fit one kind of plate to a prepared problem."""
+    return _fit_with_posterior(problem, kind, progress)[0]
+
+
+def _fit_with_posterior(problem: Problem, kind: int, progress: Progress) -> tuple[Fit, Posterior]:
+    options = problem.options
+    model = problem.model(kind)
+    seen = problem.observations()
+    if seen.distance.size == 0:
+        raise DownwarpError(
+            f"{problem.profile.name}: nothing is left to fit; outside the load, beyond the break and within FIT_FROM "
+            "and FIT_TO there is no observed station and no pick."
+        )
+    stations = problem.profile.distance
+    positions = np.concatenate([stations, seen.distance])
+    fitted = np.arange(positions.size) >= stations.size
+    observed = np.concatenate([np.full(stations.size, np.nan), seen.elevation])
+    sigma = complete_sigma(seen.sigma)
+    if sigma is not None:
+        sigma = np.concatenate([np.full(stations.size, np.nan), sigma])
+    searched = problem.breaks.size > 1 and (kind == BROKEN or bool(model.end_forces))
+
+    def evaluate(thicknesses: np.ndarray, break_position: float | None) -> tuple[np.ndarray, np.ndarray]:
+        at = float(problem.breaks[0]) if break_position is None else break_position
+        return trial_columns(model, thicknesses, at, positions, seen)
+
+    try:
+        posterior = thickness_posterior(
+            observed,
+            positions,
+            evaluate,
+            model.regional,
+            options.te_from,
+            options.te_to,
+            fitted=fitted,
+            sigma=sigma,
+            resolution=problem.profile.resolution,
+            confidence=options.confidence,
+            breaks=problem.breaks if searched else None,
+            robust=options.robust,
+            progress=progress,
+        )
+    except DownwarpError as error:
+        raise DownwarpError(f"{problem.profile.name}: {error}") from None
+    return _as_fit(problem, model, posterior, seen, searched), posterior
+
+
+def complete_sigma(sigma: np.ndarray) -> np.ndarray | None:
+    """Standard deviations with the median in place of unknown ones, none below a fifth of it; None where none is known.
+
+    Strips that happen to agree at a station do not make it certain.
+    """
+    known = np.isfinite(sigma)
+    median = np.median(sigma[known]) if known.any() else 0.0
+    if median < LEAST_SIGMA:
+        return None
+    return np.where(known, np.maximum(sigma, 0.2 * median), median)
+
+
+def trial_columns(
+    model: TransectModel, thicknesses: np.ndarray, break_position: float, positions: np.ndarray, seen: Observations
+) -> tuple[np.ndarray, np.ndarray]:
+    """Offsets (T, N), m up, and columns (T, N, p) of the predicted surface at positions, for thicknesses (T,) in m.
+
+    Before the break of a broken plate they hold the regional alone. ``seen``: what infill that follows the deflection is
+    found with.
+    """
+    first = break_position if model.kind == BROKEN else -np.inf
+    on_plate = np.maximum(positions, first)
+    offsets = np.zeros((thicknesses.size, positions.size))
+    columns = np.zeros((thicknesses.size, positions.size, len(model.end_forces) + model.regional))
+    columns[:, :, len(model.end_forces) :] = model.regional_columns(positions)
+    for trial, thickness in enumerate(thicknesses):
+        bent = _filled(model, thickness, break_position, seen) if model.fill is not None else model
+        offset, column = bent.columns(thickness, break_position, on_plate)
+        offsets[trial] = offset
+        columns[trial, :, : len(model.end_forces)] = column[:, : len(model.end_forces)]
+    beyond = positions >= first
+    offsets[:, ~beyond] = 0.0
+    columns[:, ~beyond, : len(model.end_forces)] = 0.0
+    return offsets, columns
+
+
+def _filled(model: TransectModel, thickness: float, break_position: float, seen: Observations) -> TransectModel:
+    """The model with infill where the plate sinks under its best-fitting end forces."""
+    forces = np.zeros(len(model.end_forces))
+    bent, _ = model.filled(thickness, break_position, forces)
+    if forces.size == 0:
+        return bent
+    for _ in range(10):
+        offset, columns = bent.columns(thickness, break_position, seen.distance)
+        scale = np.abs(columns).max(axis=0)
+        best = np.linalg.lstsq(columns / scale, seen.elevation - offset, rcond=None)[0] / scale
+        settled = np.allclose(best[: forces.size], forces, rtol=1e-6, atol=0.0)
+        forces = best[: forces.size]
+        bent, _ = model.filled(thickness, break_position, forces)
+        if settled:
+            break
+    return bent
+
+
+def _as_fit(problem: Problem, model: TransectModel, posterior: Posterior, seen: Observations, searched: bool) -> Fit:
+    stations = problem.profile.distance
+    thickness = posterior.te
+    break_position = posterior.break_at if posterior.break_at is not None else float(problem.breaks[0])
+    names = model.end_forces + REGIONAL_NAMES[: model.regional]
+    coefficients = {
+        name: Estimate(float(value), float(low), float(high))
+        for name, value, low, high in zip(names, posterior.linear, posterior.linear_low, posterior.linear_high)
+    }
+    in_fit = np.zeros(stations.shape, dtype=bool)
+    in_fit[seen.station[seen.station >= 0]] = True
+    values = {name: estimate.value or 0.0 for name, estimate in coefficients.items()}
+    bent = bend_problem(
+        problem,
+        model,
+        thickness,
+        break_position,
+        values,
+        tuple(values[name] for name in REGIONAL_NAMES[: model.regional]),
+        (posterior.predicted_low[: stations.size], posterior.predicted_high[: stations.size]),
+        in_fit,
+    )
+    interval = posterior.te_interval
+    has_break = model.kind == BROKEN or bool(model.end_forces)
+    if not has_break:
+        place = Estimate(None)
+    elif searched and posterior.break_interval is not None:
+        place = Estimate(break_position, posterior.break_interval.low, posterior.break_interval.high)
+    else:
+        place = Estimate(break_position)
+    noise = posterior.noise
+    surface = posterior.surface
+    misfit = tuple(
+        MisfitRow(
+            model.kind,
+            float(te),
+            break_position if has_break and not searched else float(at) if searched else None,
+            float(rms),
+            float(likelihood),
+        )
+        for te, at, rms, likelihood in zip(surface.te, surface.break_at, surface.rms, surface.relative_likelihood)
+    )
+    return Fit(
+        model.kind,
+        Estimate(thickness if posterior.resolved else None, interval.low, interval.high),
+        place,
+        coefficients,
+        posterior.rms,
+        seen.distance.size,
+        noise.effective_stations,
+        (
+            Parameter("residual_size", noise.size, "m", MEASURED),
+            Parameter("residual_correlation_length", noise.length / 1e3, "km", MEASURED),
+            Parameter("residual_white_share", noise.white_share, "1", MEASURED),
+            Parameter("log_odds_of_bending", posterior.log_odds_bent, "1", FITTED),
+        ),
+        misfit,
+        bent,
+        tuple(posterior.remarks),
+    )
+
+
+def parameters_in_use(problem: Problem, fit: Fit) -> tuple[Parameter, ...]:
+    """Every value behind a fit and where it came from."""
+    options, rho, elastic = problem.options, problem.densities, problem.options.elastic
+    km = 1e3
+    thickness = fit.thickness
+    rows = [_row("te", thickness, "km", FITTED, km)]
+    rigidity = [None if value is None else float(elastic.rigidity(value)) for value in _three(thickness)]
+    rows.append(Parameter("rigidity", rigidity[0], "N m", FITTED, rigidity[1], rigidity[2]))
+    stiffness = (rho.mantle - rho.infill) * elastic.gravity
+    alpha = [None if value is None else float(flexural_parameter(value, stiffness)) / km for value in rigidity]
+    rows.append(Parameter("flexural_parameter", alpha[0], "km", FITTED, alpha[1], alpha[2]))
+    if fit.break_position.value is not None:
+        rows.append(_row("break", fit.break_position, "km", problem.break_origin, km))
+    units = {"end_shear": "N/m", "end_moment": "N", "level": "m", "tilt": "m/km", "bow": "m/km2"}
+    scales = {"tilt": 1 / km, "bow": 1 / km**2}
+    for name, estimate in fit.coefficients.items():
+        label = f"regional_{name}" if name in REGIONAL_NAMES else name
+        rows.append(_row(label, estimate, units[name], FITTED, scales.get(name, 1.0)))
+    rows += fit.noise
+    rows.append(Parameter("rms", fit.rms, "m", FITTED))
+    if problem.reference_level is not None:
+        rows.append(Parameter("REFERENCE_LEVEL", problem.reference_level, "m", problem.reference_origin))
+    for key in ("break_at", "load", "end_forces", "regional"):
+        value, origin = options.chosen(key)
+        rows.append(Parameter(key.upper(), float(value), "", origin))
+    value, origin = options.chosen("plate")
+    rows.append(Parameter("PLATE", float(value), "", origin))
+    rows.append(Parameter("SETTING", float(options.setting), "", GIVEN))
+    for key, density in (
+        ("rho_load", rho.load),
+        ("rho_infill", rho.infill),
+        ("rho_under_load", rho.under_load),
+        ("rho_mantle", rho.mantle),
+        ("rho_water", rho.water),
+    ):
+        rows.append(Parameter(key.upper(), density, "kg/m3", problem.density_origins[key]))
+    rows += [
+        Parameter("YOUNG_GPA", elastic.young / 1e9, "GPa", GIVEN),
+        Parameter("POISSON", elastic.poisson, "1", GIVEN),
+        Parameter("GRAVITY", elastic.gravity, "m/s2", GIVEN),
+        Parameter("IN_PLANE", options.in_plane, "N/m", GIVEN),
+        Parameter("TE_FROM", options.te_from / km, "km", GIVEN),
+        Parameter("TE_TO", options.te_to / km, "km", GIVEN),
+        Parameter("CONFIDENCE", options.confidence * 100, "%", GIVEN),
+        Parameter("ROBUST", float(options.robust), "", GIVEN),
+        Parameter("FILL_SINKING_ONLY", float(options.fill_sinking_only), "", GIVEN),
+    ]
+    for key, given, scale, unit in (
+        ("FILL_LEVEL", options.fill_level, 1.0, "m"),
+        ("BREAK_FROM", options.break_from, km, "km"),
+        ("BREAK_TO", options.break_to, km, "km"),
+        ("LOAD_FROM", options.load_from, km, "km"),
+        ("LOAD_TO", options.load_to, km, "km"),
+        ("FIT_FROM", options.fit_from, km, "km"),
+        ("FIT_TO", options.fit_to, km, "km"),
+        ("SIGMA_M", options.sigma, 1.0, "m"),
+    ):
+        if given is not None:
+            rows.append(Parameter(key, given / scale, unit, GIVEN))
+    spacing = float(np.diff(problem.profile.distance).mean()) / km
+    rows.append(Parameter("STEP_KM", spacing, "km", MEASURED))
+    return tuple(rows)
+
+
+def _three(estimate: Estimate) -> tuple[float | None, float | None, float | None]:
+    return estimate.value, estimate.low, estimate.high
+
+
+def _row(name: str, estimate: Estimate, unit: str, origin: str, scale: float) -> Parameter:
+    value, low, high = (None if each is None else each / scale for each in _three(estimate))
+    return Parameter(name, value, unit, origin, low, high)

@@ -1,0 +1,205 @@
+"""What a tectonic setting implies where the user leaves a value blank, and where each value in use came from."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+from . import check
+from .elastic import Elastic
+from .errors import DownwarpError
+
+VOLCANO, TRENCH, FORELAND, REMOVED, OTHER = range(5)
+"""Settings, in the order of the key SETTING."""
+CONTINUOUS, BROKEN, BOTH, PLATE_AS_SETTING = range(4)
+"""Kinds of plate, in the order of the key PLATE."""
+BREAK_START, BREAK_LOWEST, BREAK_GIVEN, BREAK_SEARCHED, BREAK_AS_SETTING = range(5)
+"""Places of the break, in the order of the key BREAK_AT."""
+LOAD_RELIEF, LOAD_THICKNESS, LOAD_NONE, LOAD_AS_SETTING = range(4)
+"""Kinds of relief load, in the order of the key LOAD."""
+FORCES_NONE, FORCES_SHEAR, FORCES_MOMENT, FORCES_BOTH, FORCES_AS_SETTING = range(5)
+"""Forces at the break, in the order of the key END_FORCES."""
+REGIONAL_NONE, REGIONAL_LEVEL, REGIONAL_TILT, REGIONAL_BOW, REGIONAL_AS_SETTING = range(5)
+"""Regional surfaces, in the order of the key REGIONAL: the number of their coefficients."""
+
+PLATE_NAMES = ("continuous", "broken")
+
+GIVEN, FROM_SETTING, MEASURED, FITTED = "given", "setting", "measured", "fitted"
+"""Where a value in use came from."""
+
+RHO_AIR = 0.0
+"""Density of air, kg/m3, neglected beside rock and water: *common practice*."""
+
+
+@dataclass(frozen=True)
+class Setting:
+    """Defaults of one tectonic setting; densities are *common practice*, kg/m3."""
+
+    name: str
+    plate: int
+    break_at: int
+    load: int
+    end_forces: int
+    regional: int
+    rho_load: float
+    rho_infill: float
+    """Infill where the bent surface is a separate layer (basement): what lies on it."""
+    rho_infill_bare: float
+    """Infill where the DEM itself is the bent surface: the fluid on it."""
+    load_removed: bool = False
+    rho_mantle: float = 3300.0
+    rho_water: float = 1030.0
+
+
+SETTINGS = (
+    Setting(
+        "volcanic load on the seafloor",
+        CONTINUOUS,
+        BREAK_START,
+        LOAD_RELIEF,
+        FORCES_NONE,
+        REGIONAL_LEVEL,
+        2800,
+        2500,
+        1030,
+    ),
+    Setting("trench and outer rise", BROKEN, BREAK_LOWEST, LOAD_NONE, FORCES_BOTH, REGIONAL_TILT, 2800, 1030, 1030),
+    Setting("foreland basin", BROKEN, BREAK_START, LOAD_RELIEF, FORCES_SHEAR, REGIONAL_LEVEL, 2670, 2400, 0),
+    Setting("load removed", CONTINUOUS, BREAK_START, LOAD_THICKNESS, FORCES_NONE, REGIONAL_LEVEL, 1000, 0, 0, True),
+    Setting("none of these", CONTINUOUS, BREAK_START, LOAD_RELIEF, FORCES_NONE, REGIONAL_LEVEL, 2700, 1030, 1030),
+)
+
+
+@dataclass(frozen=True)
+class FitOptions:
+    """What the user asks of a fit; None means "as the setting". Lengths are in m, forces per metre of strike in SI."""
+
+    setting: int = VOLCANO
+    plate: int = PLATE_AS_SETTING
+    te_from: float = 1e3
+    te_to: float = 100e3
+    break_at: int = BREAK_AS_SETTING
+    break_position: float | None = None
+    break_from: float | None = None
+    break_to: float | None = None
+    load: int = LOAD_AS_SETTING
+    reference_level: float | None = None
+    load_from: float | None = None
+    load_to: float | None = None
+    end_forces: int = FORCES_AS_SETTING
+    regional: int = REGIONAL_AS_SETTING
+    rho_load: float | None = None
+    rho_infill: float | None = None
+    rho_mantle: float | None = None
+    rho_water: float | None = None
+    rho_under_load: float | None = None
+    fill_sinking_only: bool = False
+    fill_level: float | None = None
+    elastic: Elastic = field(default_factory=Elastic)
+    in_plane: float = 0.0
+    fit_from: float | None = None
+    fit_to: float | None = None
+    sigma: float | None = None
+    robust: bool = False
+    confidence: float = 0.9
+
+    def __post_init__(self) -> None:
+        for key, choice, count in (
+            ("SETTING", self.setting, 5),
+            ("PLATE", self.plate, 4),
+            ("BREAK_AT", self.break_at, 5),
+            ("LOAD", self.load, 4),
+            ("END_FORCES", self.end_forces, 5),
+            ("REGIONAL", self.regional, 5),
+        ):
+            if choice not in range(count):
+                raise DownwarpError(f"{key} is {choice!r}; it takes a number from 0 to {count - 1}.")
+        check.number("TE_FROM", self.te_from / 1e3, at_least=0.1, at_most=1000)
+        check.number("TE_TO", self.te_to / 1e3, at_least=0.1, at_most=1000)
+        if self.te_from >= self.te_to:
+            raise DownwarpError(f"TE_FROM ({self.te_from / 1e3:g} km) must be below TE_TO ({self.te_to / 1e3:g} km).")
+        for key, value in (("RHO_LOAD", self.rho_load), ("RHO_MANTLE", self.rho_mantle)):
+            if value is not None:
+                check.number(key, value, above=0, at_most=20000)
+        for key, value in (
+            ("RHO_INFILL", self.rho_infill),
+            ("RHO_WATER", self.rho_water),
+            ("RHO_UNDER_LOAD", self.rho_under_load),
+        ):
+            if value is not None:
+                check.number(key, value, at_least=0, at_most=20000)
+        for low_key, low, high_key, high in (
+            ("BREAK_FROM", self.break_from, "BREAK_TO", self.break_to),
+            ("LOAD_FROM", self.load_from, "LOAD_TO", self.load_to),
+            ("FIT_FROM", self.fit_from, "FIT_TO", self.fit_to),
+        ):
+            for key, value in ((low_key, low), (high_key, high)):
+                if value is not None:
+                    check.number(key, value / 1e3)
+            if low is not None and high is not None and low >= high:
+                raise DownwarpError(f"{low_key} ({low / 1e3:g} km) must be below {high_key} ({high / 1e3:g} km).")
+        if self.break_at == BREAK_GIVEN and self.break_position is None:
+            raise DownwarpError("BREAK_KM is blank; BREAK_AT 2 takes the distance of the break in it.")
+        if self.break_position is not None:
+            check.number("BREAK_KM", self.break_position / 1e3, at_least=0)
+        if self.break_at == BREAK_SEARCHED and (self.break_from is None or self.break_to is None):
+            raise DownwarpError("BREAK_FROM and BREAK_TO must both be given where BREAK_AT is 3 (searched).")
+        if self.sigma is not None:
+            check.number("SIGMA_M", self.sigma, above=0)
+        if self.reference_level is not None:
+            check.number("REFERENCE_LEVEL", self.reference_level, at_least=-20000, at_most=20000)
+        if self.fill_level is not None:
+            check.number("FILL_LEVEL", self.fill_level, at_least=-20000, at_most=20000)
+        check.number("IN_PLANE", self.in_plane)
+        check.number("CONFIDENCE", self.confidence * 100, above=0, below=100)
+
+    @property
+    def defaults(self) -> Setting:
+        """The setting's own values."""
+        return SETTINGS[self.setting]
+
+    def chosen(self, name: str) -> tuple[int, str]:
+        """The value in use of an enumerated option, and where it came from."""
+        value = getattr(self, name)
+        as_setting = {"plate": 3, "break_at": 4, "load": 3, "end_forces": 4, "regional": 4}[name]
+        if value == as_setting:
+            return getattr(self.defaults, name), FROM_SETTING
+        return value, GIVEN
+
+    def densities(self, bare: bool) -> tuple[Densities, dict[str, str]]:
+        """Densities in use, kg/m3, and where each came from; ``bare`` where the DEM itself is the bent surface."""
+        default = self.defaults
+        infill = default.rho_infill_bare if bare else default.rho_infill
+        origins = {}
+
+        def pick(name: str, given: float | None, otherwise: float) -> float:
+            origins[name] = FROM_SETTING if given is None else GIVEN
+            return otherwise if given is None else given
+
+        rho_infill = pick("rho_infill", self.rho_infill, infill)
+        result = Densities(
+            load=pick("rho_load", self.rho_load, default.rho_load),
+            infill=rho_infill,
+            under_load=pick("rho_under_load", self.rho_under_load, rho_infill),
+            mantle=pick("rho_mantle", self.rho_mantle, default.rho_mantle),
+            water=pick("rho_water", self.rho_water, default.rho_water),
+        )
+        return result, origins
+
+
+@dataclass(frozen=True)
+class Densities:
+    """Densities in kg/m3."""
+
+    load: float
+    infill: float
+    under_load: float
+    mantle: float
+    water: float
+
+    def __post_init__(self) -> None:
+        for key, value in (("RHO_INFILL", self.infill), ("RHO_UNDER_LOAD", self.under_load)):
+            if value >= self.mantle:
+                raise DownwarpError(
+                    f"{key} ({value:g} kg/m3) must be below RHO_MANTLE ({self.mantle:g} kg/m3): "
+                    "otherwise nothing restores the plate."
+                )
