@@ -77,9 +77,9 @@ class Frame:
         if len(geodetic.axis_info) != 2 or not np.isclose(full_turn(geodetic) or 0.0, 360.0):
             description = geodetic.to_json_dict()
             description.pop("id", None)
-            geodetic = CRS.from_json_dict({
-                **description, "type": "GeographicCRS", "coordinate_system": _LONGITUDE_LATITUDE
-            })
+            geodetic = CRS.from_json_dict(
+                {**description, "type": "GeographicCRS", "coordinate_system": _LONGITUDE_LATITUDE}
+            )
         return cls(plain, geodetic, owner)
 
     @cached_property

@@ -1,0 +1,50 @@
+# Every target sets up what it needs; see .ci/setup. Results go to build/.
+.PHONY: help demo test lint types unit bench calibrate zip clean setup-demo setup-test
+
+SYSTEM_PYTHON = $${DOWNWARP_PYTHON:-/usr/bin/python3}
+PYTHON = .venv/bin/python
+# An earlier choice of the user's stands: xcb shows the windows that tests open.
+export QT_QPA_PLATFORM ?= offscreen
+
+help:
+	@echo 'make demo       make the demo layers, fit them, compare with the truth; layers in build/demo'
+	@echo 'make test       lint, types and all tests'
+	@echo 'make bench      speed of the plate solver beside general libraries'
+	@echo 'make calibrate  how often the intervals hold the truth'
+	@echo 'make zip        the plugin as QGIS installs it, in build/'
+	@echo 'make clean      remove build/, .venv and caches'
+
+setup-demo:
+	@sh .ci/setup demo
+
+setup-test:
+	@sh .ci/setup test
+
+demo: setup-demo
+	@$(SYSTEM_PYTHON) tests/tools/demo.py build/demo
+
+test: setup-test lint types unit
+
+lint: setup-test
+	.venv/bin/ruff check .
+
+# mypy wants a package name, which the checkout's own folder name need not be.
+types: setup-test
+	@mkdir -p build/types && ln -sfn ../.. build/types/downwarp
+	cd build/types && ../../.venv/bin/mypy --config-file downwarp/pyproject.toml -p downwarp.plugin -p downwarp.algorithms
+
+unit: setup-test
+	$(PYTHON) -m pytest
+
+bench: setup-test
+	@$(PYTHON) tests/bench/run.py
+
+calibrate: setup-test
+	@$(PYTHON) tests/calibration/run.py
+
+zip:
+	@$(SYSTEM_PYTHON) tests/tools/package.py build
+
+clean:
+	rm -rf build .venv .mypy_cache .ruff_cache .pytest_cache .hypothesis
+	find . -name __pycache__ -type d -prune -exec rm -rf {} +

@@ -1,0 +1,1 @@
+"""One Processing algorithm per file, its help beside it."""

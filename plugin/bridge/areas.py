@@ -1,0 +1,50 @@
+"""Which places lie inside the polygons of a layer."""
+
+from __future__ import annotations
+
+import numpy as np
+import shapely.geometry
+import shapely.ops
+import shapely.wkb
+from qgis.core import QgsFeatureSource
+
+from ..core.errors import DownwarpError
+from .frames import Frame, full_turn, transformer
+
+try:  # shapely 2
+    from shapely import contains_xy
+except ImportError:  # shapely 1.8
+
+    def contains_xy(geometry, x, y):
+        """Whether points lie inside a geometry."""
+        from shapely.vectorized import contains
+
+        return contains(geometry, x, y)
+
+
+class Areas:
+    """The polygons of a layer as one area; made on the main thread, asked off it."""
+
+    def __init__(self, source: QgsFeatureSource, frame: Frame, label: str) -> None:
+        """``frame``: the longitudes and latitudes it will be asked for; ``label``: the key that errors name."""
+        own = Frame.of(source.sourceCrs(), label)
+        self._to_own = transformer(frame.geographic, own.crs, label)
+        self._turn = full_turn(own.crs)
+        polygons = []
+        for feature in source.getFeatures():
+            geometry = feature.geometry()
+            if not geometry.isNull() and not geometry.isEmpty():
+                polygons.append(shapely.wkb.loads(bytes(geometry.asWkb())).buffer(0))
+        if not polygons:
+            raise DownwarpError(f"{label} holds no polygon.")
+        self._area = shapely.ops.unary_union(polygons)
+
+    def contain(self, longitude: np.ndarray, latitude: np.ndarray) -> np.ndarray:
+        """Whether places in degrees lie inside, bool, in the shape of the input."""
+        x, y = self._to_own.transform(longitude, latitude)
+        x, y = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
+        turns = (0.0,) if self._turn is None else (0.0, self._turn, -self._turn)
+        inside = np.zeros(x.shape, dtype=bool)
+        for turn in turns:
+            inside |= np.asarray(contains_xy(self._area, x + turn, y), dtype=bool)
+        return inside

@@ -1,0 +1,50 @@
+"""Picks of the bent surface: read once, then laid onto each transect that they are near to."""
+
+from __future__ import annotations
+
+import numpy as np
+from qgis.core import NULL, QgsFeatureSource
+
+from ..core.errors import DownwarpError
+from ..core.profile import Picks
+from ..core.transect import Transect
+from .frames import Frame, transformer
+
+
+def number_of(value, what: str) -> float:
+    """A field's value as a number, NaN where it is NULL; ``what`` names it in the error."""
+    if value in (None, NULL, ""):
+        return float("nan")
+    try:
+        return float(value)
+    except (TypeError, ValueError):
+        raise DownwarpError(f"{what} holds {value!r}; it takes numbers.") from None
+
+
+class PickReader:
+    """The picks of a point layer."""
+
+    def __init__(self, source: QgsFeatureSource, frame: Frame, elevation: str, sigma: str | None, reach: float) -> None:
+        """``elevation``, ``sigma``: names of fields, m up and m; ``reach``: m from the line up to which picks count."""
+        rows = []
+        for feature in source.getFeatures():
+            geometry = feature.geometry()
+            if geometry.isNull() or geometry.isEmpty():
+                continue
+            spread = number_of(feature[sigma], f"PICK_SIGMA field {sigma}") if sigma else float("nan")
+            height = number_of(feature[elevation], f"PICK_ELEVATION field {elevation}")
+            rows += [(point.x(), point.y(), height, spread) for point in geometry.vertices()]
+        if not rows:
+            raise DownwarpError("PICKS holds no point.")
+        x, y, self._elevation, self._sigma = np.array(rows).T
+        own = Frame.of(source.sourceCrs(), "PICKS")
+        self._longitude, self._latitude = transformer(own.crs, frame.geographic, "PICKS").transform(x, y)
+        self._reach = reach
+
+    def on(self, transect: Transect) -> Picks:
+        """The picks within reach of a transect, in the order of distance along it."""
+        along, across = transect.project(self._longitude, self._latitude)
+        near = np.abs(across) <= self._reach
+        near &= (along >= 0) & (along <= transect.length) & np.isfinite(self._elevation)
+        order = np.nonzero(near)[0][np.argsort(along[near], kind="stable")]
+        return Picks(along[order], self._elevation[order], self._sigma[order])

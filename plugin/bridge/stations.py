@@ -1,0 +1,90 @@
+"""Stations that come as a layer or a table rather than from rasters."""
+
+from __future__ import annotations
+
+from functools import partial
+
+import numpy as np
+from qgis.core import QgsFeatureSource, QgsWkbTypes
+
+from ..core.errors import DownwarpError
+from ..core.profile import Profile
+from .keys import Values
+from .outputs import Track
+from .picks import number_of
+from .runs import Item, Progress
+
+
+def field_names(values: Values, source: QgsFeatureSource) -> dict[str, str]:
+    """Fields in use by key. A key left blank means its usual field, where INPUT has it; DISTANCE must be there."""
+    names = {}
+    for key in ("DISTANCE", "LOAD_FIELD", "OBSERVED_FIELD", "SIGMA_FIELD", "TRANSECT_FIELD"):
+        usual = values.keys[key].default
+        name = values.raw(key) or usual
+        if source.fields().lookupField(name) >= 0:
+            names[key] = name
+        elif name != usual or key == "DISTANCE":
+            raise DownwarpError(f"{key}: INPUT has no field {name!r}.")
+    if "LOAD_FIELD" not in names and "OBSERVED_FIELD" not in names:
+        raise DownwarpError("INPUT has neither the field of LOAD_FIELD nor that of OBSERVED_FIELD; the fit takes one.")
+    return names
+
+
+def has_places(source: QgsFeatureSource) -> bool:
+    """Whether the features of a source have geometry."""
+    return source.wkbType() != QgsWkbTypes.Type.NoGeometry
+
+
+def station_items(source: QgsFeatureSource, names: dict[str, str], resolution: float) -> list[Item]:
+    """The transects of INPUT in order of appearance; ``resolution`` in m."""
+    numeric = [key for key in names if key != "TRANSECT_FIELD"]
+    located = has_places(source)
+    groups: dict[str, list[list[float]]] = {}
+    reasons: dict[str, str] = {}
+    for feature in source.getFeatures():
+        name = str(feature[names["TRANSECT_FIELD"]]) if "TRANSECT_FIELD" in names else "1"
+        group = groups.setdefault(name, [])
+        try:
+            row = [number_of(feature[names[key]], f"Transect {name}: {key} field {names[key]}") for key in numeric]
+        except DownwarpError as error:
+            reasons.setdefault(name, str(error))
+            continue
+        point = next(feature.geometry().vertices(), None) if located and feature.hasGeometry() else None
+        group.append([*row, point.x(), point.y()] if point is not None else [*row, np.nan, np.nan])
+    return [
+        Item(name, partial(_sampled, name, numeric, group, reasons.get(name), resolution))
+        for name, group in groups.items()
+    ]
+
+
+def _sampled(
+    name: str, numeric: list[str], group: list[list[float]], reason: str | None, resolution: float, progress: Progress
+) -> tuple[Track | None, Profile]:
+    """Track and profile of one transect; without a relief field the observed surface takes its place."""
+    progress(0.0)
+    if reason is not None:
+        raise DownwarpError(reason)
+    table = np.array(group)
+    columns = {key: table[:, place] for place, key in enumerate(numeric)}
+    order = np.argsort(columns["DISTANCE"], kind="stable")
+    order = order[np.isfinite(columns["DISTANCE"][order])]
+    if order.size < 2:
+        raise DownwarpError(f"Transect {name} has {order.size} stations with a distance; it takes at least 2.")
+    table = table[order]
+    columns = {key: values[order] for key, values in columns.items() if np.isfinite(values).any()}
+    distance = columns["DISTANCE"]
+    repeated = distance[1:][np.diff(distance) <= 0]
+    if repeated.size:
+        raise DownwarpError(
+            f"Transect {name} has two stations at distance {repeated[0]:g} km (DISTANCE); it takes one each, and "
+            "TRANSECT_FIELD where INPUT holds several transects."
+        )
+    relief, observed = columns.get("LOAD_FIELD"), columns.get("OBSERVED_FIELD")
+    if relief is None:
+        relief, observed = observed, None
+    if relief is None:
+        raise DownwarpError(f"Transect {name}: neither LOAD_FIELD nor OBSERVED_FIELD holds a number.")
+    profile = Profile(name, distance * 1e3, relief, observed, columns.get("SIGMA_FIELD"), resolution=resolution)
+    place = table[:, -2:]
+    track = Track(distance * 1e3, place[:, 0], place[:, 1]) if np.isfinite(place).all() else None
+    return track, profile

@@ -1,0 +1,58 @@
+"""Start-up: hands Downwarp's algorithms to QGIS Processing, with or without a window."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from qgis.core import Qgis, QgsApplication, QgsMessageLog
+
+if TYPE_CHECKING:
+    from .provider import DownwarpProvider
+
+TITLE = "Downwarp"
+
+# Some packagings of QGIS come without these.
+_REQUIRED = ("numpy", "scipy", "shapely", "pyproj")
+
+
+class DownwarpPlugin:
+    """The plugin as QGIS loads it; ``iface`` is None without a window."""
+
+    def __init__(self, iface) -> None:
+        self.iface = iface
+        self.provider: DownwarpProvider | None = None
+
+    def initProcessing(self) -> None:
+        """Register the provider: all that qgis_process asks of a plugin."""
+        if self.provider is not None:
+            return
+        try:
+            from .provider import DownwarpProvider
+        except ModuleNotFoundError as error:
+            missing = (error.name or "").partition(".")[0]
+            if missing not in _REQUIRED:
+                raise
+            self._say_missing(missing)
+            return
+        self.provider = DownwarpProvider()
+        QgsApplication.processingRegistry().addProvider(self.provider)
+
+    def initGui(self) -> None:
+        """Start in a window."""
+        self.initProcessing()
+
+    def unload(self) -> None:
+        """Take back what was registered."""
+        if self.provider is not None:
+            QgsApplication.processingRegistry().removeProvider(self.provider)
+            self.provider = None
+
+    def _say_missing(self, package: str) -> None:
+        text = (
+            f"Downwarp needs the Python package {package}, which this QGIS does not have. "
+            f"On Debian and Ubuntu: sudo apt install python3-{package}. "
+            f"Elsewhere, in the shell of this QGIS: python3 -m pip install {package}. Then start QGIS again."
+        )
+        QgsMessageLog.logMessage(text, TITLE, Qgis.MessageLevel.Critical)
+        if self.iface is not None:
+            self.iface.messageBar().pushCritical(TITLE, text)

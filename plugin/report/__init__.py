@@ -1,0 +1,1 @@
+"""The report: one self-contained HTML file with figures, made from core results."""
