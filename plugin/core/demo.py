@@ -46,7 +46,7 @@ class Scenario:
 
 SCENARIOS = (
     Scenario("Ostrun ridge", VOLCANO, 24e3, (10e3, 690e3), {"RHO_UNDER_LOAD": 2800}),
-    Scenario("Velmar trench", TRENCH, 34e3, (60e3, 690e3), {}),
+    Scenario("Velmar trench", TRENCH, 34e3, (60e3, 690e3), {"SWATH_KM": 60, "SWATH_LINES": 9}),
     Scenario("Harrow front", FORELAND, 18e3, (90e3, 690e3), {"REFERENCE_LEVEL": 200}),
 )
 RIDGE_CENTRE, RIDGE_HALF_WIDTH, RIDGE_HEIGHT, SEAFLOOR = 330e3, 75e3, 3600.0, -5200.0

@@ -10,6 +10,8 @@ from .settings import RHO_AIR, Densities
 
 CREST_SHARE = 0.25
 """A rise counts as load of its own where its crest reaches this share of the highest one's (see `load_mask`)."""
+FOOT_SHARE = 0.02
+"""A rise ends where its height falls to this share of the highest crest's: plains are never quite level."""
 
 
 def relief_load(relief, reference_level: float, densities: Densities, gravity: float) -> np.ndarray:
@@ -29,11 +31,11 @@ def relief_load(relief, reference_level: float, densities: Densities, gravity: f
 def load_mask(relief, reference_level: float, crest_share: float = CREST_SHARE) -> np.ndarray:
     """Stations that belong to a load where the same DEM also shows the bent surface, shape (n,), bool.
 
-    A bulge rises above the level too, but is no load. Hence: every run of stations above the level whose crest
-    reaches ``crest_share`` of the highest crest. NaN is no load.
+    A bulge rises above the level too, but is no load. Hence: every run of stations that stand above the level by
+    `FOOT_SHARE` of the highest crest, and whose own crest reaches ``crest_share`` of that. NaN is no load.
     """
     height = np.nan_to_num(np.asarray(relief, dtype=float) - reference_level, nan=-1.0)
-    above = height > 0
+    above = height > FOOT_SHARE * max(height.max(), 0.0)
     if not above.any():
         return above
     run = np.cumsum(np.diff(above.astype(int), prepend=0) == 1) * above  # 0 outside, 1, 2, ... inside the runs
