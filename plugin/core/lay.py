@@ -5,8 +5,8 @@ it: a geodesic is straight, and only vertices turn. The strike at a place is the
 weighted by a triangle that falls from the place to nothing at half the smoothing length on either side.
 
 Where transects would cross, for the guide bends more sharply than they are long, their strike is smoothed over longer
-and longer stretches until they do not, as long as this turns none of them by more than `MOST_TURN`; where that is not
-enough they keep the strike that was asked for, and the crossings are reported.
+and longer stretches until they do not, as long as this turns none of them by more than `MOST_TURN` from the front's
+trend; where that is not enough they keep the strike that was asked for, and the crossings are reported.
 """
 
 from __future__ import annotations
@@ -27,7 +27,8 @@ LEFT_TO_RIGHT, RIGHT_TO_LEFT = range(2)
 MOST_TRANSECTS = 20_000
 """Transects that one guide or centre may get."""
 MOST_TURN = 45.0
-"""Angle, degrees, by which a transect may be turned away from the strike asked for so that it crosses no other."""
+"""Angle, degrees, between a transect and the normal to the front's trend, up to which it may be turned so that it
+crosses no other. The trend is the strike smoothed over the length of a transect."""
 
 _OBLIQUE = 15.0
 """Turn, degrees, from which a remark warns: widths grow by 1 / cos, here 4 %, and thickness with their 4/3 power."""
@@ -218,6 +219,7 @@ def _untangle(
         return _crossings(strike, azimuth, before, after)
 
     azimuth, lengths = asked, np.maximum(smoothing, spacing)
+    trend = strike.azimuth(np.maximum(lengths, before + after)) + across
     pairs = crossings(azimuth)
     stuck = np.zeros(asked.size, dtype=bool)
     for _ in range(_ROUNDS):
@@ -226,7 +228,8 @@ def _untangle(
             break
         longer = np.where(grow, lengths * _GROWTH, lengths)
         trial = np.where(grow, strike.azimuth(longer) + across, azimuth)
-        stuck |= (np.abs(_half_turns(trial - asked)) > MOST_TURN) | (longer > 2.0 * strike.along[-1] + spacing)
+        off, off_now = np.abs(_half_turns(trial - trend)), np.abs(_half_turns(azimuth - trend))
+        stuck |= ((off > MOST_TURN) & (off >= off_now) & grow) | (longer > 2.0 * strike.along[-1] + spacing)
         lengths = np.where(stuck, lengths, longer)
         azimuth = np.where(stuck, azimuth, trial)
         pairs = crossings(azimuth)

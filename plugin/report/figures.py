@@ -30,7 +30,9 @@ FAINT = "#8a969b"
 
 MOST_DOTS = 200
 """Observed stations that are drawn as dots; of more, every second, third ... is drawn, which the legend says."""
-MOST_CORNERS = 400
+NEGLIGIBLE = 1e-4
+"""Likelihood over its peak below which trials may lie outside the misfit figure."""
+MOST_CORNERS = 250
 """Stations, or up to twice as many, at which shaded areas have corners."""
 
 _LONG_DECIMALS = re.compile(r"(?<![\w.#])([1-9]\d*\.\d)\d+")
@@ -49,6 +51,7 @@ _DOT = {"linestyle": "none", "marker": "o", "markersize": 2.8}
 _FITTED = {**_DOT, "color": INK, "markeredgewidth": 0.0}
 _NOT_FITTED = {**_DOT, "markerfacecolor": "white", "markeredgecolor": FAINT, "markeredgewidth": 0.6}
 _PICK = {"linestyle": "none", "marker": "x", "markersize": 5, "color": INK}
+_PREDICTED = {"color": PLATE, "linewidth": 2.0, "label": "predicted surface"}
 _LOADED = {"facecolor": LOAD_PALE, "edgecolor": LOAD, "hatch": "////", "linewidth": 0.0}
 _BAND = {"facecolor": PLATE_PALE, "edgecolor": PLATE, "linewidth": 0.6, "linestyle": ":"}
 _INTERVAL = {"facecolor": PLATE_PALE, "edgecolor": PLATE, "hatch": "\\\\\\\\", "linewidth": 0.0}
@@ -105,8 +108,10 @@ def without_glyphs(image: str, glyphs: dict[str, str]) -> str:
     short: dict[str, str] = {}
 
     def take(glyph: re.Match) -> str:
-        short[glyph[1]] = "".join(word[0] for word in re.findall("[A-Z]+[a-z]*", glyph[1])) + glyph[1].rpartition("-")[2]
-        glyphs[short[glyph[1]]] = glyph[0].replace(glyph[1], short[glyph[1]], 1)
+        font, _, code = glyph[1].rpartition("-")
+        name = "".join(re.findall("[A-Z]", font)) + code
+        short[glyph[1]] = name
+        glyphs[name] = glyph[0].replace(glyph[1], name, 1)
         return ""
 
     image = _GLYPH.sub(take, image)
@@ -189,11 +194,12 @@ def _deflection_at(bent: Bent, distance: float) -> float | None:
     return float(np.interp(distance, at[known], stations.deflection[known]))
 
 
-def profile_axes(figure: Any, bent: Bent, rms: float | None = None) -> ProfileAxes:
+def profile_axes(figure: Any, bent: Bent, rms: float | None = None, legend: bool = True) -> ProfileAxes:
     """Draw a transect into an empty ``figure``: relief, load, observed and predicted surface, markers; residuals below.
 
     ``rms``: root mean square residual, m, drawn as a pair of lines. Bent plates that were not fitted have no residuals
-    in the fit; those of observed stations are drawn open.
+    in the fit; those of observed stations are drawn open. The legend, with the values of the marked places, takes the
+    foot of the figure; it wants a figure at least 4.5 inches wide and 4 high.
     """
     profile, stations, problem = bent.problem.profile, bent.stations, bent.problem
     km = profile.distance / 1e3
@@ -201,7 +207,8 @@ def profile_axes(figure: Any, bent: Bent, rms: float | None = None) -> ProfileAx
     strip = bool(np.any(stations.load)) and not relief_is_load
     heights = [0.55, 2.6, 1.0] if strip else [2.6, 1.0]
     shape = {"nrows": len(heights), "ncols": 1, "height_ratios": heights, "hspace": 0.12}
-    shape.update(left=0.105, right=0.985, top=0.97)
+    width, height = figure.get_size_inches()
+    shape.update(left=0.78 / width, right=1.0 - 0.11 / width, top=0.97)
     grid = figure.add_gridspec(**shape)
     surface = figure.add_subplot(grid[-2])
     residual = figure.add_subplot(grid[-1], sharex=surface)
@@ -220,15 +227,15 @@ def profile_axes(figure: Any, bent: Bent, rms: float | None = None) -> ProfileAx
     _name(surface, y="elevation, m")
     _name(residual, x="distance from the line's start, km", y="residual, m")
     # The legend below takes as much room as it has rows.
-    room = min(0.5, (0.55 + 0.17 * -(-len(handles) // 3)) / figure.get_figheight())
+    columns = max(1, int(width / 2.2))
+    room = min(0.6, (0.55 + (0.17 * -(-len(handles) // columns) if legend else 0.0)) / height)
     grid = figure.add_gridspec(**shape, bottom=room)
     for axes, cell in zip(figure.axes if not strip else (load, surface, residual), range(len(heights))):
         axes.set_position(grid[cell].get_position(figure))
     figure.align_ylabels()
-    legend = figure.legend(
-        handles=handles, loc="lower center", ncol=3, bbox_to_anchor=(0.53, 0.0), columnspacing=1.6, **_LEGEND
-    )
-    legend.set_in_layout(False)
+    if legend:
+        place = {"loc": "lower center", "bbox_to_anchor": (0.53, 0.0), "ncol": columns, "columnspacing": 1.6}
+        figure.legend(handles=handles, **place, **_LEGEND)
     return ProfileAxes(surface, residual, load)
 
 
@@ -241,8 +248,8 @@ def _thinned(chosen: np.ndarray) -> tuple[np.ndarray, str]:
 
 
 def _outline(values: np.ndarray) -> np.ndarray:
-    """Indices whose values, joined by lines, look like all of them on paper: of many stations the least and the greatest
-    of each of `MOST_CORNERS` stretches, and both ends."""
+    """Indices whose values, joined by lines, look like all of them on paper: of many stations the least and the
+    greatest of each of `MOST_CORNERS` stretches, and both ends."""
     if values.size <= 2 * MOST_CORNERS:
         return np.arange(values.size)
     stretches = np.array_split(np.arange(values.size), MOST_CORNERS)
@@ -286,7 +293,7 @@ def _draw_surfaces(axes: Any, bent: Bent, km: np.ndarray, relief_is_load: bool) 
         bars = {"yerr": sigma, "elinewidth": 0.8, "label": "picks", "zorder": 6, **_PICK}
         handles.append(axes.errorbar(picks.distance / 1e3, picks.elevation, **bars))
     shown = _outline(stations.predicted)
-    handles += axes.plot(km[shown], stations.predicted[shown], color=PLATE, linewidth=2.0, label="predicted surface", zorder=7)
+    handles += axes.plot(km[shown], stations.predicted[shown], zorder=7, **_PREDICTED)
     return handles + _draw_markers(axes, bent)
 
 
@@ -418,7 +425,7 @@ def posterior_figure(result: FitResult) -> Any | None:
         km = density.thickness / 1e3
         line = {"color": PLATE, "linewidth": 2.0} if fit is best else {"color": INK, "linewidth": 1.2}
         axes.plot(km, density.density, linestyle=style, label=f"{PLATE_NAMES[fit.kind]} plate", zorder=4, **line)
-        if fit is best and is_resolved(fit):
+        if fit is best and is_resolved(fit) and fit.thickness.value is not None:
             low = km[0] if fit.thickness.low is None else fit.thickness.low / 1e3
             high = km[-1] if fit.thickness.high is None else fit.thickness.high / 1e3
             inside = np.union1d(km[(km > low) & (km < high)], [low, high])
@@ -440,7 +447,8 @@ def posterior_figure(result: FitResult) -> Any | None:
 
 
 def misfit_figure(fit: Fit) -> Any | None:
-    """Misfit over thickness and break, with contours of relative likelihood; None where the break was not searched."""
+    """Misfit over thickness and break around the best fit, with contours of relative likelihood; None where the break
+    was not searched."""
     rows = [row for row in fit.misfit if row.break_position is not None]
     if not rows or np.ptp([row.break_position for row in rows]) == 0 or np.ptp([row.thickness for row in rows]) == 0:
         return None
@@ -452,9 +460,12 @@ def misfit_figure(fit: Fit) -> Any | None:
     _, unique = np.unique(np.round(points[:, :2], 6), axis=0, return_index=True)
     log_te, breaks, rms, likelihood = points[unique].T
     low, span = np.array([log_te.min(), breaks.min()]), np.array([np.ptp(log_te), np.ptp(breaks)])
-    triangles = Triangulation((log_te - low[0]) / span[0], (breaks - low[1]) / span[1])
-    x, y = np.linspace(0.0, 1.0, 49), np.linspace(0.0, 1.0, 33)
-    mesh = np.meshgrid(x, y)
+    unit = (np.column_stack([log_te, breaks]) - low) / span
+    near = unit[likelihood > NEGLIGIBLE * likelihood.max()]
+    room = 0.3 * np.ptp(near, axis=0) + 0.03
+    first, last = np.maximum(near.min(axis=0) - room, 0.0), np.minimum(near.max(axis=0) + room, 1.0)
+    x, y = np.linspace(first[0], last[0], 41), np.linspace(first[1], last[1], 29)
+    triangles, mesh = Triangulation(*unit.T), np.meshgrid(x, y)
     surface = LinearTriInterpolator(triangles, rms)(*mesh)
     log_likelihood = LinearTriInterpolator(triangles, np.log(np.maximum(likelihood, 1e-12)))(*mesh)
     te_km, break_km = np.exp(low[0] + x * span[0]) / 1e3, (low[1] + y * span[1]) / 1e3
@@ -464,7 +475,7 @@ def misfit_figure(fit: Fit) -> Any | None:
     _tidy(axes)
     axes.grid(False)
     # Levels crowd near the best fit, where the answer is decided.
-    levels = np.unique(np.quantile(rms, [0.0, 0.05, 0.1, 0.2, 0.35, 0.5, 0.75, 1.0]))
+    levels = np.unique(np.quantile(surface.compressed(), [0.0, 0.05, 0.1, 0.2, 0.35, 0.5, 0.75, 1.0]))
     shades = LinearSegmentedColormap.from_list("downwarp misfit", ["#ffffff", PLATE_PALE, PLATE, "#123f4c"])
     if levels.size > 1:
         filled = axes.contourf(te_km, break_km, surface, levels=levels, cmap=shades, norm=_even_norm(levels))
@@ -606,12 +617,12 @@ def strike_figure(rows: Sequence[StrikeRow], te_range: tuple[float, float]) -> A
     first = figure.add_subplot(grid[0])
     _tidy(first)
     limits = _thickness_limits([row.thickness for row in rows], te_range)
-    thin = {"linewidth": 1.0} if len(rows) > 60 else {}
+    linewidth = 1.0 if len(rows) > 60 else 2.2
     for at, row in zip(x, rows):
         if row.thickness.value is None:
-            first.plot([at], [limits[0]], clip_on=False, zorder=5, **{**_PICK, "color": LOAD})
+            first.plot([at], [limits[0]], clip_on=False, zorder=5, **_PICK)
         else:
-            _interval_bar(first, at, row.thickness, limits, True, color=PLATE, **thin)
+            _interval_bar(first, at, row.thickness, limits, True, color=PLATE, linewidth=linewidth)
     _log_km(first, "y", *limits)
     _name(first, y="elastic thickness, km")
     axes = [first]
@@ -786,7 +797,7 @@ def _scale_and_north(figure: Any, axes: Any, low: np.ndarray, high: np.ndarray, 
     margin.set_ylim(0.0, 1.0)
     margin.annotate("", (0.5, 0.97), (0.5, 0.80), arrowprops={"arrowstyle": "-|>", "color": INK, "linewidth": 1.4})
     margin.text(0.5, 0.78, "north", ha="center", va="top", fontsize=_TEXT, color=INK)
-    bar = figure.add_axes((box.x1 - wide, 0.0, wide, 0.2 / total[1]))
+    bar = figure.add_axes((box.x1 - wide, 0.03 / total[1], wide, 0.2 / total[1]))
     bar.set_axis_off()
     bar.set_xlim(0.0, 1.0)
     bar.set_ylim(0.0, 1.0)

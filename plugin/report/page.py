@@ -467,5 +467,5 @@ td.n,th.n{text-align:right}
 td.n{white-space:nowrap}
 a{color:var(--plate)}
 @media print{body{font-size:10.5pt}header{border-bottom-color:#000}a{color:inherit;text-decoration:none}
-.transect{break-before:page}.table{overflow:visible}tr{break-inside:avoid}@page{margin:16mm}}
+h2,h2+p{break-after:avoid}.transect{break-before:page}.table{overflow:visible}tr{break-inside:avoid}@page{margin:16mm}}
 """

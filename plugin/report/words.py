@@ -136,7 +136,8 @@ def headline(result: FitResult) -> str:
         f"{stated(rho.mantle)} (mantle) and {stated(rho.infill)} kg/m³ (infill)"
     )
     kind = PLATE_NAMES[fit.kind]
-    if not is_resolved(fit):
+    thickness = fit.thickness
+    if thickness.value is None or not is_resolved(fit):
         return f"Elastic thickness is not resolved: these data do not bound that of a {kind} plate at {given}."
-    value, interval = number(fit.thickness.value / 1e3), interval_words(fit.thickness, "km", 1e3)
+    value, interval = number(thickness.value / 1e3), interval_words(thickness, "km", 1e3)
     return f"Elastic thickness {value} km ({confidence} interval {interval}) of a {kind} plate, at {given}."
