@@ -13,6 +13,10 @@ from . import check
 from .errors import DownwarpError
 
 
+LEAST_INDEPENDENT = 1.5
+"""Independent strips that two or more strips count as at the least."""
+
+
 @dataclass(frozen=True)
 class Swath:
     """Strips combined station by station, each array of shape (stations,)."""
@@ -20,11 +24,13 @@ class Swath:
     mean: np.ndarray
     """Mean of the strips, in the unit of the values; NaN where no strip has a value."""
     sigma: np.ndarray
-    """Standard error of that mean, spread / sqrt(count); NaN where fewer than two strips have a value."""
+    """Standard error of that mean (see `combine`); NaN where fewer than two strips have a value."""
     spread: np.ndarray
     """Standard deviation between strips (with count - 1); NaN where fewer than two strips have a value."""
     count: np.ndarray
     """Strips that have a value."""
+    likeness: float
+    """Correlation of neighbouring strips' departures from the mean, 0 to below 1."""
 
 
 @dataclass(frozen=True)
@@ -60,16 +66,35 @@ def offsets(width: float, strips: int) -> np.ndarray:
 def combine(values: np.ndarray) -> Swath:
     """Mean and uncertainty of strips (strips, stations), leaving NaN out.
 
-    The standard error serves as sigma, for it is the mean that a plate is fitted to. It takes strips as independent:
-    strips closer together than the relief is wide repeat each other, and then the true uncertainty is larger.
+    The standard error serves as sigma, for it is the mean that a plate is fitted to. Neighbouring strips repeat each
+    other where they are closer together than the relief is wide; with r the correlation of their departures from the
+    mean, ``count`` strips are worth n = count (1 - r) / (1 + r) independent ones, at least `LEAST_INDEPENDENT` (a
+    first-order autoregression across the swath; von Storch & Zwiers, Statistical Analysis in Climate Research, section
+    6.6, from memory), and sigma is spread sqrt((1 - 1 / count) / (n - 1)).
     """
     values = _strips(values)
     known = np.isfinite(values)
     count = known.sum(axis=0)
     mean = np.where(count > 0, np.where(known, values, 0.0).sum(axis=0) / np.maximum(count, 1), np.nan)
-    squares = np.where(known, values - mean, 0.0) ** 2
-    spread = np.where(count > 1, np.sqrt(squares.sum(axis=0) / np.maximum(count - 1, 1)), np.nan)
-    return Swath(mean, spread / np.sqrt(np.maximum(count, 1)), spread, count)
+    departures = np.where(known, values - mean, 0.0)
+    spread = np.where(count > 1, np.sqrt((departures**2).sum(axis=0) / np.maximum(count - 1, 1)), np.nan)
+    likeness = _likeness(departures, known)
+    independent = np.maximum(count * (1.0 - likeness) / (1.0 + likeness), LEAST_INDEPENDENT)
+    # The spread about their own mean misses what the strips have in common; this is spread / sqrt(count) at r = 0.
+    sigma = spread * np.sqrt(np.maximum(count - 1, 0) / np.maximum(count, 1) / (independent - 1.0))
+    return Swath(mean, sigma, spread, count, likeness)
+
+
+def _likeness(departures: np.ndarray, known: np.ndarray) -> float:
+    """Correlation of neighbouring strips, freed from the mean having been taken out of them; 0 to below 1."""
+    both = known[1:] & known[:-1]
+    strips = known.shape[0]
+    scale = 0.5 * ((departures[1:] ** 2)[both].sum() + (departures[:-1] ** 2)[both].sum())
+    if strips < 3 or not scale > 0.0:
+        return 0.0
+    found = float((departures[1:] * departures[:-1])[both].sum() / scale)
+    # Independent strips less their mean correlate by -1 / (strips - 1).
+    return float(np.clip(found + 1.0 / (strips - 1), 0.0, 0.99))
 
 
 def align(
