@@ -13,11 +13,25 @@ from .choices import moving_choices, try_choices
 from .elastic import flexural_parameter
 from .errors import DownwarpError
 from .forward import TransectModel
-from .posterior import Comparison, Posterior, compare, thickness_posterior
+from .mapped import forward_model
+from .posterior import DECISIVE, Comparison, Model, Posterior, Surface, compare, thickness_posterior
 from .problem import Observations, Problem, prepare
 from .profile import Profile
-from .result import ChoiceRow, Estimate, Fit, FitResult, MisfitRow, Parameter
-from .settings import BOTH, BROKEN, CONTINUOUS, FITTED, GIVEN, LOAD_RELIEF, MEASURED, PLATE_NAMES, FitOptions
+from .result import ChoiceRow, Estimate, Fit, FitResult, MisfitRow, Parameter, ZonesFit
+from .settings import (
+    BOTH,
+    BROKEN,
+    CONTINUOUS,
+    FITTED,
+    GIVEN,
+    LOAD_RELIEF,
+    MAPPED,
+    MEASURED,
+    PLATE_NAMES,
+    FitOptions,
+)
+from .strip_check import check_strip, strip_remarks
+from .zones import ZoneSearch, search_zones
 
 LEVEL_ROUNDS = 4
 """Fits after which the reference level is left as it is."""
@@ -26,7 +40,13 @@ LEAST_SIGMA = 1e-3
 LEVEL_SETTLED = 2.0
 """Change of the reference level, m, that no longer matters."""
 
+CORRELATION_LENGTH = "residual_correlation_length"
 REGIONAL_NAMES = ("level", "tilt", "bow")
+ZONE_CHANGES = (10e3, 150e3)
+"""Distances from the break, m, between which a change of thickness is sought where the user gives none: published ones
+lie 20 to 95 km from a trench's axis (Zhang, Lin & Zhou, abstract alone)."""
+ZONE_PART = 0.5
+"""Part of the fitted plate within which it is sought then, at most."""
 
 Progress = Callable[[float], None]
 
@@ -61,8 +81,23 @@ def fit_profile(
     if comparison is not None:
         remarks.append(comparison.remark)
         parameters += (Parameter("log_odds_of_continuous_plate", comparison.log_odds, "1", FITTED),)
-    remarks += moving_choices(choices, best)
+    remarks += _bend_left_to_noise(best) + moving_choices(choices, best) + _strip_checked(problem, best)
     return FitResult(best, parameters, tuple(fits), choices, tuple(dict.fromkeys(remarks)))
+
+
+def _bend_left_to_noise(fit: Fit) -> tuple[str, ...]:
+    """A remark where residuals are as long as the plate's own bend and not small beside its bulge."""
+    bulge = fit.bent.markers.bulge
+    length = next(row.value for row in fit.noise if row.name == CORRELATION_LENGTH) or 0.0
+    problem = fit.bent.problem
+    stiffness = (problem.densities.mantle - problem.densities.infill) * problem.options.elastic.gravity
+    alpha = float(flexural_parameter(problem.options.elastic.rigidity(fit.bent.thickness), stiffness))
+    if bulge is None or length * 1e3 < alpha or fit.rms < 0.5 * abs(bulge.deflection):
+        return ()
+    return (
+        f"the fit leaves residuals of {fit.rms:.0f} m, as long as the plate's own bend, beside a bulge of "
+        f"{abs(bulge.deflection):.0f} m: it follows the part next to the break alone; begin the fit farther out (FIT_FROM)",
+    )
 
 
 def _fit_kinds(problem: Problem, tell: Progress) -> tuple[list[Fit], Comparison | None]:
@@ -78,6 +113,21 @@ def _fit_kinds(problem: Problem, tell: Progress) -> tuple[list[Fit], Comparison 
     names = f"a {PLATE_NAMES[CONTINUOUS]} plate", f"a {PLATE_NAMES[BROKEN]} plate"
     comparison = compare(posteriors[0], posteriors[1], names)
     return (fits if comparison.log_odds >= 0 else fits[::-1]), comparison
+
+
+def _strip_checked(problem: Problem, fit: Fit) -> tuple[str, ...]:
+    """What a fit with a strip must say of it, where it was asked to and the relief about the line is known."""
+    options, plan, thickness = problem.options, problem.profile.plan, fit.thickness
+    if not options.check_strip or options.load_shape == MAPPED or plan is None or thickness.value is None:
+        return ()
+    if fit.kind != CONTINUOUS:
+        return ("the strip was not checked: the plate is broken",)
+    try:
+        options = replace(options, reference_level=problem.reference_level)
+        checked = check_strip(problem.profile, plan, options, thickness.value)
+    except DownwarpError as error:
+        return (f"the strip was not checked: {error}",)
+    return strip_remarks(checked, thickness.low, thickness.high)
 
 
 def _fitted_level(problem: Problem, fit: Fit) -> float | None:
@@ -106,7 +156,7 @@ def fit_kind(problem: Problem, kind: int, progress: Progress = _silent) -> Fit:
 
 def _fit_with_posterior(problem: Problem, kind: int, progress: Progress) -> tuple[Fit, Posterior]:
     options = problem.options
-    model = problem.model(kind)
+    model, told = forward_model(problem, kind)
     seen = problem.observations()
     if seen.distance.size == 0:
         raise DownwarpError(
@@ -126,25 +176,123 @@ def _fit_with_posterior(problem: Problem, kind: int, progress: Progress) -> tupl
         at = float(problem.breaks[0]) if break_position is None else break_position
         return trial_columns(model, thicknesses, at, positions, seen)
 
-    try:
-        posterior = thickness_posterior(
+    def infer(trials: Model, places: np.ndarray | None, tell: Progress) -> Posterior:
+        return thickness_posterior(
             observed,
             positions,
-            evaluate,
+            trials,
             model.regional,
             options.te_from,
             options.te_to,
             fitted=fitted,
             sigma=sigma,
+            known_error=options.sigma or 0.0,
             resolution=problem.profile.resolution,
             confidence=options.confidence,
-            breaks=problem.breaks if searched else None,
+            breaks=places,
             robust=options.robust,
-            progress=progress,
+            progress=tell,
         )
+
+    def evaluate_zones(zoned: TransectModel, thicknesses: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        return trial_columns(zoned, thicknesses, float(problem.breaks[0]), positions, seen)
+
+    zones = None
+    try:
+        if options.zones == 1:
+            posterior = infer(evaluate, problem.breaks if searched else None, progress)
+        else:
+            one = infer(evaluate, None, functools.partial(_share, progress, 0.0, 0.1))
+            tell = functools.partial(_share, progress, 0.1, 0.9)
+            model, posterior, zones = _fit_zones(problem, model, seen, one, infer, evaluate_zones, tell)
     except DownwarpError as error:
         raise DownwarpError(f"{problem.profile.name}: {error}") from None
-    return _as_fit(problem, model, posterior, seen, searched), posterior
+    fit = _as_fit(problem, model, posterior, seen, searched)
+    told += () if zones is None else (_zones_remark(zones.log_odds),)
+    return replace(fit, remarks=fit.remarks + told, zones=zones), posterior
+
+
+def _fit_zones(
+    problem: Problem,
+    model: TransectModel,
+    seen: Observations,
+    one: Posterior,
+    infer: Callable[[Model, np.ndarray, Progress], Posterior],
+    evaluate: Callable[[TransectModel, np.ndarray], tuple[np.ndarray, np.ndarray]],
+    tell: Progress,
+) -> tuple[TransectModel, Posterior, ZonesFit]:
+    """The best plate of two zones, its posterior as that of a fit with the break held, and the zones.
+
+    ``one``: what one zone comes to; ``infer`` and ``evaluate``: the posterior of trials on the line, and the trials.
+    """
+    low, high = zone_range(problem, seen)
+    rounds = 0
+
+    def run(search: ZoneSearch) -> Posterior:
+        nonlocal rounds
+        # Half of what is left: how many refinements it takes is not known beforehand.
+        rounds += 1
+        part = functools.partial(_share, tell, 1.0 - 0.5 ** (rounds - 1), 0.5**rounds)
+
+        def trials(thicknesses: np.ndarray, place: float | None) -> tuple[np.ndarray, np.ndarray]:
+            return evaluate(search.model(model, place or 0.0), thicknesses)
+
+        return infer(trials, search.places, part)
+
+    search, two = search_zones(run, ZoneSearch.between(low, high) if low < high else ZoneSearch.held(low))
+    log_odds = compare(two, one).log_odds + search.log_prior
+    found = search.summary(two, problem.options.confidence)
+    near, change = Estimate(None), Estimate(None)
+    if two.resolved:
+        near = Estimate(found.near, found.near_interval.low, found.near_interval.high)
+        change = Estimate(found.change, found.change_interval.low, found.change_interval.high)
+    if low == high:
+        change = Estimate(low)
+    best = search.model(model, two.break_at or 0.0)
+    # The places searched stand for pairs of share and change, whose bounds the fields of the zones tell.
+    remarks = tuple(remark for remark in two.remarks if not remark.startswith("The break is not bounded"))
+    as_held = replace(two, break_at=None, break_interval=None, remarks=remarks, surface=_over_places(two))
+    return best, as_held, ZonesFit(near, change, log_odds)
+
+
+def zone_range(problem: Problem, seen: Observations) -> tuple[float, float]:
+    """Distances from the break, m, between which the change of thickness is sought; raises DownwarpError."""
+    options = problem.options
+    stretch = float(seen.distance.max()) - float(problem.breaks[0])
+    high = min(ZONE_CHANGES[1], ZONE_PART * stretch) if options.zone_to is None else options.zone_to
+    low = min(ZONE_CHANGES[0], 0.5 * high) if options.zone_from is None else options.zone_from
+    if not high < stretch:
+        raise DownwarpError(
+            f"ZONE_CHANGE_TO is {high / 1e3:g} km, but what is fitted reaches {stretch / 1e3:.0f} km from the break."
+        )
+    if low > high:
+        raise DownwarpError(
+            f"ZONE_CHANGE_FROM is {low / 1e3:g} km, but the change is sought up to {high / 1e3:g} km: give a "
+            "ZONE_CHANGE_TO beyond it."
+        )
+    return low, high
+
+
+def _over_places(posterior: Posterior) -> Surface:
+    """The final trials of a search over zones by thickness alone: the least misfit, and the density over all places."""
+    surface, grid = posterior.surface, posterior.search.grid
+    shape = grid.breaks.size, grid.log_te.size
+    rms = surface.rms[-shape[0] * shape[1] :].reshape(shape).min(axis=0)
+    density = posterior.te_density.copy()
+    density[[0, -1]] *= 2.0  # the ends stand for half a step
+    return Surface(posterior.te_grid, np.full(shape[1], np.nan), rms, density / density.max())
+
+
+def _zones_remark(log_odds: float) -> str:
+    """Two zones beside one, in words."""
+    size = abs(log_odds)
+    odds = f"{np.exp(size):.2g}" if size < 13.8 else "more than a million"
+    words = ("two zones of elastic thickness", "one")
+    if size < DECISIVE:
+        return f"undecided between {words[0]} and {words[1]} (odds {odds} to 1 for {'two' if log_odds > 0 else 'one'})"
+    if log_odds > 0:
+        return f"{words[0]} are preferred to {words[1]} (odds {odds} to 1)"
+    return f"one zone of elastic thickness is preferred to two (odds {odds} to 1)"
 
 
 def complete_sigma(sigma: np.ndarray) -> np.ndarray | None:
@@ -210,6 +358,9 @@ def _as_fit(problem: Problem, model: TransectModel, posterior: Posterior, seen: 
         name: Estimate(float(value), float(low), float(high))
         for name, value, low, high in zip(names, posterior.linear, posterior.linear_low, posterior.linear_high)
     }
+    if not posterior.resolved:
+        # As the thickness, they may be anything.
+        coefficients.update({name: Estimate(coefficients[name].value) for name in model.end_forces})
     in_fit = np.zeros(stations.shape, dtype=bool)
     in_fit[seen.station[seen.station >= 0]] = True
     values = {name: estimate.value or 0.0 for name, estimate in coefficients.items()}
@@ -253,7 +404,7 @@ def _as_fit(problem: Problem, model: TransectModel, posterior: Posterior, seen: 
         noise.effective_stations,
         (
             Parameter("residual_size", noise.size, "m", MEASURED),
-            Parameter("residual_correlation_length", noise.length / 1e3, "km", MEASURED),
+            Parameter(CORRELATION_LENGTH, noise.length / 1e3, "km", MEASURED),
             Parameter("residual_white_share", noise.white_share, "1", MEASURED),
             Parameter("log_odds_of_bending", posterior.log_odds_bent, "1", FITTED),
         ),
@@ -274,6 +425,16 @@ def parameters_in_use(problem: Problem, fit: Fit) -> tuple[Parameter, ...]:
     stiffness = (rho.mantle - rho.infill) * elastic.gravity
     alpha = [None if value is None else float(flexural_parameter(value, stiffness)) / km for value in rigidity]
     rows.append(Parameter("flexural_parameter", alpha[0], "km", FITTED, alpha[1], alpha[2]))
+    if fit.zones is not None:
+        held = options.zone_from is not None and options.zone_from == options.zone_to
+        rows.append(_row("te_near", fit.zones.near, "km", FITTED, km))
+        rows.append(_row("zone_change", fit.zones.change, "km", GIVEN if held else FITTED, km))
+        rows.append(Parameter("log_odds_of_two_zones", fit.zones.log_odds, "1", FITTED))
+        limits = zone_range(problem, problem.observations())
+        for key, given, value in zip(
+            ("ZONE_CHANGE_FROM", "ZONE_CHANGE_TO"), (options.zone_from, options.zone_to), limits
+        ):
+            rows.append(Parameter(key, value / km, "km", MEASURED if given is None else GIVEN))
     if fit.break_position.value is not None:
         rows.append(_row("break", fit.break_position, "km", problem.break_origin, km))
     units = {"end_shear": "N/m", "end_moment": "N", "level": "m", "tilt": "m/km", "bow": "m/km2"}
@@ -309,6 +470,8 @@ def parameters_in_use(problem: Problem, fit: Fit) -> tuple[Parameter, ...]:
         Parameter("CONFIDENCE", options.confidence * 100, "%", GIVEN),
         Parameter("ROBUST", float(options.robust), "", GIVEN),
         Parameter("FILL_SINKING_ONLY", float(options.fill_sinking_only), "", GIVEN),
+        Parameter("LOAD_SHAPE", float(options.load_shape), "", GIVEN),
+        Parameter("TE_ZONES", float(options.zones), "", GIVEN),
     ]
     for key, given, scale, unit in (
         ("FILL_LEVEL", options.fill_level, 1.0, "m"),

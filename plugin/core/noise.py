@@ -79,6 +79,10 @@ class Factor:
         return dtrtrs(self.lower, columns, lower=1)[0]
 
 
+KNOWN_ERROR_SPREAD = 0.05
+"""Standard deviation of the logarithm of a stated error: how far it may itself be wrong."""
+
+
 class NoiseFamily:
     """All noise settings of one line; covariances are factorised on first use and kept for every later trial."""
 
@@ -89,19 +93,22 @@ class NoiseFamily:
         amplitude=None,
         extra=None,
         *,
+        known_error: float = 0.0,
         families: tuple[int, ...] = (0, 1, 2),
         lengths=None,
         white_shares: tuple[float, ...] = WHITE_SHARES,
     ) -> None:
         """``distance``: of the stations, m, shape (n,), any order; ``sigma``: their own errors, any unit, shape (n,);
         ``amplitude``: local size of the noise, 1, shape (n,); ``extra``: surplus variance of outliers in units of the
-        noise's variance, shape (n,); ``lengths``: correlation lengths, m, in place of the usual ones."""
+        noise's variance, shape (n,); ``known_error``: the least white noise, m (see `log_prior_of_size`); ``lengths``:
+        correlation lengths, m, in place of the usual ones."""
         self.distance = check.finite_array("distance", distance, ndim=1)
         n = self.distance.size
         if n < 3:
             raise DownwarpError(f"There are {n} stations to fit; it takes at least 3.")
         ones = np.ones(n)
         self.sigma = ones if sigma is None else _positive("sigma", sigma, n)
+        self.known_error = check.number("known_error", known_error, at_least=0)
         self.sigma = self.sigma / np.median(self.sigma)
         self.amplitude = ones if amplitude is None else _positive("amplitude", amplitude, n)
         self.extra = np.zeros(n) if extra is None else check.finite_array("extra", extra, ndim=1)
@@ -128,6 +135,18 @@ class NoiseFamily:
                 Setting(family, float(length), share, prior) for length in self.lengths for share in white_shares
             ]
         return tuple(settings)
+
+    def log_prior_of_size(self, setting: Setting, size: float) -> float:
+        """ln prior, up to a constant, of a noise of size s, m, whose white part is smaller than the known error.
+
+        -1/2 [ln(min(error, s) / (s sqrt(w))) / spread]^2 where the white part is the smaller, else 0: residuals may be
+        whiter than the stations' own errors, for models are not exact, but not smoother, whatever smoothness would gain.
+        """
+        white = size * np.sqrt(setting.white_share)
+        least = min(self.known_error, size)
+        if not least > white:
+            return 0.0
+        return float(-0.5 * (np.log(least / max(white, 1e-12 * least)) / KNOWN_ERROR_SPREAD) ** 2)
 
     def covariance(self, setting: Setting, correlated: np.ndarray | None = None) -> np.ndarray:
         """R of one setting, shape (n, n); ``correlated``: its part without the white share, if at hand."""

@@ -10,27 +10,27 @@ f = n - p0 - p1 and the residual sum of squares in the metric of R^-1
 
     S = min over b0, b1 of |z - X0 b0 - X1 b1|^2
 
-the likelihood with b0 (flat prior), b1 and the size s (prior 1 / s) integrated out is
+the likelihood with b0 (flat prior, columns made orthonormal), b1 and the size s (prior ds^2 / s^2) integrated out is
 
-    |R|^-1/2 |X'R^-1 X|^-1/2 Gamma(f / 2) (pi S)^(-f / 2) |X1' Q X1|^1/2 (2 pi n v)^(-p1 / 2),
+    |R|^-1/2 |X' R^-1 X|^-1/2 Gamma(f/2) (pi S)^(-f/2) |X1' Q X1|^1/2 (2 pi n v)^(-p1/2),
 
-where Q takes out the regional by plain least squares and v is the variance of y about the regional. The last two factors
-are the prior density of b1: normal, with deflections as large as the observed relief. They make the likelihood
+where Q takes out the regional by plain least squares and v is the variance of y about the regional. The last two
+factors are the prior density of b1: normal, with deflections as large as the observed relief. They make the likelihood
 independent of how columns of X1 are scaled or mixed, hence fair to trials whose columns have different units or sizes
 (a flat prior on end shear and moment is not), and comparable between models with different numbers of plate parameters:
 the evidence. The likelihood is averaged over the R of `noise`. The prior of Te is flat in its logarithm over the search
 range, that of the break flat over its range.
 
-The noise may vary along the line and have heavy tails, as relief does (`_unevenness`): its local amplitude is measured
-from leave-one-out residuals and followed as far as it exceeds what stationary noise would show, and the logarithm of the
-likelihood is divided by a tempering where the residuals' kurtosis shows heavy tails.
+The noise may vary along the line and have heavy tails, as relief does (`_unevenness`): its local amplitude is
+measured from leave-one-out residuals and followed as far as it exceeds what stationary noise would show, and the
+logarithm of the likelihood is divided by a tempering where the residuals' kurtosis shows heavy tails.
 
 Source of the restricted likelihood: Harville 1974, Biometrika 61 (from memory).
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from typing import Callable
 
 import numpy as np
@@ -55,19 +55,23 @@ NEGLIGIBLE = 1e-4
 """Weight of a noise setting, relative to the best, below which it is dropped."""
 MOST_REFINEMENTS = 6
 """Grids after which the search takes what it has."""
-DECISIVE = 3.0
-"""ln odds (20 to 1) at which a model counts as preferred, and a bent plate as resolved."""
+DECISIVE = float(np.log(10.0))
+"""ln odds (10 to 1) at which a model counts as preferred, and a bent plate as resolved."""
 WINDOW = 45e3
 """Standard deviation, m, of the window in which the noise's local amplitude is averaged."""
 HEAVY_FROM = (3.4, 4.4)
 """Kurtosis of the residuals at which tempering sets in and at which it is full."""
-TEMPERING = 1.4
-"""Number by which the ln likelihood is divided where residuals have heavy tails; calibrated on relief of five ocean
-regions and verified on five others (see tests/calibration)."""
+TEMPERING = (1.5, 2.6)
+"""Numbers by which the ln likelihood is divided where residuals have heavy tails, without and with down-weighting of
+outliers (which takes the tails away that would widen the interval); calibrated on the relief of five ocean regions and
+verified on five others (tests/calibration)."""
 OPEN = 0.1
 """Density at an end of the search range, over the mode's, above which that side counts as open."""
-OUTLIER = 4.0
-"""Robust standard deviations beyond which a station counts as an outlier."""
+ROBUST_PASSES = 3
+"""Times that outliers are looked for, each time with those found before down-weighted."""
+OUTLIER, WIDE_OUTLIER = 5.0, 8.0
+"""Robust standard deviations beyond which a station counts as an outlier: of its leave-one-out residual, and of its
+plain one (for seamounts several stations wide)."""
 
 
 @dataclass(frozen=True)
@@ -109,7 +113,7 @@ class Surface:
     break_at: np.ndarray
     """Break, m, NaN where none is searched, shape (trials,)."""
     rms: np.ndarray
-    """Root mean square residual of the (weighted) least-squares fit, m, shape (trials,)."""
+    """Root mean square residual of the plain least-squares fit, m, shape (trials,)."""
     relative_likelihood: np.ndarray
     """Marginal likelihood over the best trial's, 1, shape (trials,)."""
 
@@ -198,7 +202,8 @@ class _Grid:
     basis: np.ndarray
     """(m, r)"""
     settings: tuple[Setting, ...] = ()
-    log_likelihood: np.ndarray | None = None
+    """Noise settings that the trials were weighed under"""
+    log_likelihood: np.ndarray = field(default_factory=lambda: np.zeros((0, 0)))
     """(settings, K T)"""
     moments: tuple[np.ndarray, ...] = ()
     """Gram matrices of the basis and the regional columns per setting, each (r + p0, r + p0)"""
@@ -234,6 +239,7 @@ def thickness_posterior(
     *,
     fitted=None,
     sigma=None,
+    known_error: float = 0.0,
     resolution: float = 0.0,
     confidence: float = 0.9,
     breaks=None,
@@ -245,11 +251,13 @@ def thickness_posterior(
 
     ``observed``: elevations y, m up, shape (N,), NaN allowed where not fitted. ``distance``: m, shape (N,).
     ``model(te, break_at)`` returns for thicknesses te (T,), m, the offset (T, N) and columns (T, N, p) of
-    y = offset + columns b; the last ``common`` columns are the regional and must not depend on the trial. ``te_from``,
-    ``te_to``: search range, m. ``fitted``: bool (N,), the stations to fit (all by default). ``sigma``: the stations' own
-    errors, m, shape (N,); they shape the white part of the noise, and only their ratios count. ``resolution``: cell size
-    of the data, m; stations nearer together are averaged for inference. ``confidence``: 0 to 1. ``breaks``: increasing break positions to search, m, two or more.
-    ``robust``: down-weight outliers. ``families``: places in `noise.FAMILIES` to average over.
+    y = offset + columns b; the last ``common`` columns are the regional and must not depend on the trial.
+    ``te_from``, ``te_to``: search range, m. ``fitted``: bool (N,), the stations to fit (all by default). ``sigma``:
+    their own errors, (N,); they shape the white part of the noise, and only their ratios count. ``known_error``: m, the
+    least white noise that the stations are known to have. ``resolution``: cell size of the data, m; stations nearer
+    together are averaged for inference. ``confidence``: 0 to 1.
+    ``breaks``: evenly spaced break positions to search, m, two or more. ``robust``: down-weight outliers.
+    ``families``: places in `noise.FAMILIES` to average over. ``progress``: is told the fraction done.
 
     Raises DownwarpError on input that cannot be used, and passes on what ``progress`` or ``model`` raise.
     """
@@ -270,6 +278,8 @@ def thickness_posterior(
             raise DownwarpError("sigma must be above 0 at every fitted station.")
     searched = breaks is not None
     breaks = check.increasing("breaks", breaks) if searched else np.array([np.nan])
+    if searched and not np.allclose(np.diff(breaks), breaks[1] - breaks[0]):
+        raise DownwarpError("breaks must be evenly spaced.")
     tell = progress if progress is not None else (lambda fraction: None)
 
     asked = 0
@@ -283,6 +293,11 @@ def thickness_posterior(
     step = (np.log(te_to) - np.log(te_from)) / COARSE_INTERVALS
     log_te = np.log(te_from) + step * np.arange(COARSE_INTERVALS + 1)
     offset, columns = evaluate(log_te, breaks)
+    regional = columns.shape[2] - common
+    if not np.array_equal(columns[0, :, regional:], columns[-1, :, regional:]):
+        raise DownwarpError(
+            f"The last {common} columns of the model are the regional and must not depend on the trial."
+        )
     line = _line(observed, distance, places, sigma, resolution, columns[0], common)
     if line.observed.size < columns.shape[2] + 3:
         raise DownwarpError(
@@ -293,18 +308,23 @@ def thickness_posterior(
     errors = None if sigma is None else 1.0 / np.sqrt((line.merge > 0) @ sigma**-2.0 / (line.merge > 0).sum(axis=1))
     tell(0.2)
     first = _grid(line, log_te, breaks, offset, columns)
-    search = _search(line, NoiseFamily(centre, errors, families=families), first, evaluate, searched)
-    for fraction in (0.4, 0.5, 0.6) if robust else ():
-        tell(fraction)
+    search = _search(
+        line, NoiseFamily(centre, errors, known_error=known_error, families=families), first, evaluate, searched
+    )
+    tell(0.4)
+    amplitude, heavy = _unevenness(line, search)
+    for _ in range(ROBUST_PASSES if robust else 0):
         extra = _outliers(line, search)
         settled = bool(np.array_equal(extra > 0, search.noise.extra > 0))
-        noise = NoiseFamily(centre, errors, extra=extra, families=families)
+        noise = NoiseFamily(centre, errors, extra=extra, known_error=known_error, families=families)
         search = _search(line, noise, first, evaluate, searched)
         if settled:
             break
     tell(0.7)
-    amplitude, tempering = _unevenness(line, search)
-    noise = NoiseFamily(centre, errors, amplitude, search.noise.extra, families=families)
+    if search.noise.extra.any():
+        amplitude = _unevenness(line, search)[0]  # tails are judged with the outliers in
+    noise = NoiseFamily(centre, errors, amplitude, search.noise.extra, known_error=known_error, families=families)
+    tempering = 1.0 + heavy * (TEMPERING[int(robust)] - 1.0)
     search = replace(_search(line, noise, first, evaluate, searched), tempering=tempering)
     tell(0.9)
     te_mode, break_mode = _mode(search)
@@ -330,7 +350,7 @@ def _search(line: _Line, noise: NoiseFamily, grid: _Grid, evaluate, searched: bo
 
 
 def _mode(search: Search) -> tuple[np.ndarray, np.ndarray]:
-    """ln Te and break at the posterior's mode, each (1,), by a parabola through the best grid point and its neighbours."""
+    """ln Te and break at the posterior's mode, each (1,): a parabola through the best grid point and its neighbours."""
     marginal = search.grid.marginal()
     row, column = np.unravel_index(int(np.argmax(marginal)), marginal.shape)
     return (
@@ -389,20 +409,23 @@ def _alone(line: _Line, search: Search):
         own = np.maximum(np.diag(precision), 1e-12 * np.diag(precision).max())
         target = q.T @ white[:, count]
         coefficients = np.linalg.lstsq(triangle, target, rcond=1e-10)[0]
-        yield share, _Alone(
-            residual=(half.T @ (white[:, count] - q @ target)) / own,
-            variance=np.maximum(1.0 / own - noise.extra, 1e-3 / own),
-            correlation=precision / np.sqrt(own[:, None] * own),
-            plain=z - columns @ coefficients,
+        yield (
+            share,
+            _Alone(
+                residual=(half.T @ (white[:, count] - q @ target)) / own,
+                variance=np.maximum(1.0 / own - noise.extra, 1e-3 / own),
+                correlation=precision / np.sqrt(own[:, None] * own),
+                plain=z - columns @ coefficients,
+            ),
         )
 
 
 def _unevenness(line: _Line, search: Search) -> tuple[np.ndarray, float]:
-    """Local amplitude of the noise along the line, (m,), and the tempering that heavy tails ask for.
+    """Local amplitude of the noise along the line, (m,), and how heavy its tails are, 0 to 1.
 
     Squares of the standardised leave-one-out residuals are averaged in a Gaussian window; their variation along the
-    line beyond what stationary Gaussian noise would show says how far to follow it. Their kurtosis, 3 for Gaussian noise,
-    sets the tempering.
+    line beyond what stationary Gaussian noise would show says how far to follow it. Their kurtosis, 3 for Gaussian
+    noise, tells heavy tails.
     """
     at = search.noise.distance
     window = max(WINDOW, search.noise.span / (at.size - 1))
@@ -419,7 +442,7 @@ def _unevenness(line: _Line, search: Search) -> tuple[np.ndarray, float]:
     follow = excess / (excess + expected)
     low, high = HEAVY_FROM
     heavy = float(np.clip((kurtosis - low) / (high - low), 0.0, 1.0))
-    return np.sqrt(np.maximum(1.0 + follow * (ratio - 1.0), 0.01)), 1.0 + (TEMPERING - 1.0) * heavy
+    return np.sqrt(np.maximum(1.0 + follow * (ratio - 1.0), 0.01)), heavy
 
 
 def _outliers(line: _Line, search: Search) -> np.ndarray:
@@ -435,7 +458,7 @@ def _outliers(line: _Line, search: Search) -> np.ndarray:
         single = np.where(np.abs(standard) > OUTLIER * scale, (standard / scale) ** 2 * alone.variance, 0.0)
         plain = alone.plain - np.median(alone.plain)
         spread = max(1.4826 * float(np.median(np.abs(plain))), 1e-300)
-        wide = np.where(np.abs(plain) > OUTLIER * spread, (plain / scale) ** 2, 0.0)
+        wide = np.where(np.abs(plain) > WIDE_OUTLIER * spread, (plain / scale) ** 2, 0.0)
         extra += share * np.maximum(single, wide)
     return extra
 
@@ -509,6 +532,7 @@ def _weigh(line: _Line, noise: NoiseFamily, grid: _Grid, settings: tuple[Setting
             - 0.5 * (factor.log_determinant + log_regional)
             + 0.5 * (volume - precision)
             - 0.5 * free * np.log(left)
+            + noise.log_prior_of_size(factor.setting, float(np.sqrt(left.min() / free)))
         )
     grid.settings, grid.log_likelihood, grid.moments = settings, np.array(likelihood), tuple(moments)
 
@@ -520,7 +544,8 @@ def _plate_terms(inner: np.ndarray, scale: np.ndarray) -> tuple[np.ndarray, np.n
     if plate == 0:
         return np.zeros(trials), np.zeros(trials)
     matrix = inner[:, 1:, 1:] / (scale[:, :, None] * scale[:, None, :])
-    matrix = matrix + 1e-10 * np.einsum("tii->t", matrix)[:, None, None] * np.eye(plate)
+    ridge = 1e-10 * np.einsum("tii->t", matrix) + 1e-30  # columns may be parallel, or 0 at every station
+    matrix = matrix + ridge[:, None, None] * np.eye(plate)
     right = inner[:, 1:, 0] / scale
     explained = (right * np.linalg.solve(matrix, right[:, :, None])[:, :, 0]).sum(axis=1)
     return np.linalg.slogdet(matrix)[1], np.maximum(explained, 0.0)
@@ -553,9 +578,7 @@ def _log_evidence(search: Search) -> float:
 def _log_evidence_regional(line: _Line, noise: NoiseFamily, tempering: float) -> float:
     """The same of the regional alone."""
     stations = int(line.fitted.max()) + 1
-    grid = _grid(
-        line, np.zeros(1), np.array([np.nan]), np.zeros((1, stations)), np.zeros((1, stations, line.common))
-    )
+    grid = _grid(line, np.zeros(1), np.array([np.nan]), np.zeros((1, stations)), np.zeros((1, stations, line.common)))
     _weigh(line, noise, grid, noise.settings)
     return float(grid.marginal()[0, 0]) / tempering
 
@@ -668,7 +691,11 @@ def _summary(line, search, mode, observed, te_from, te_to, breaks, searched, con
     quadrature[[0, -1]] = 0.5
     te_density = density.sum(axis=0)
     low, high = _highest_density(grid.log_te, te_density, confidence, np.log(te_from), np.log(te_to))
-    te_interval = Interval(None if low is None else float(np.exp(low)), None if high is None else float(np.exp(high)))
+    te_mode = float(np.exp(mode.log_te[0]))  # kept inside where the grid's rounding would leave it just outside
+    te_interval = Interval(
+        None if low is None else min(float(np.exp(low)), te_mode),
+        None if high is None else max(float(np.exp(high)), te_mode),
+    )
     break_interval = None
     break_density = np.zeros(0)
     if searched:
@@ -696,7 +723,7 @@ def _summary(line, search, mode, observed, te_from, te_to, breaks, searched, con
     predicted = mode.offset[0] + mode.columns[0] @ linear
     residual = observed[line.fitted] - predicted[line.fitted]
     return Posterior(
-        te=float(np.exp(mode.log_te[0])),
+        te=te_mode,
         te_interval=te_interval,
         resolved=bool(resolved),
         remarks=remarks,
@@ -744,7 +771,7 @@ def _remarks(resolved, odds, te_interval, break_interval, te_from, te_to, noise,
     outliers = int((noise.extra > 0).sum())
     if outliers:
         remarks.append(f"{outliers} stations were down-weighted as outliers.")
-    if tempering > 1.0:
+    if tempering > 1.0 and resolved:
         remarks.append(f"Residuals have heavy tails: intervals were widened (likelihood tempered by {tempering:.2g}).")
     return tuple(remarks)
 
@@ -756,7 +783,7 @@ class Comparison:
     log_odds: float
     """ln odds of the first model against the second, 1: the less decisive of the odds under either model's noise."""
     preferred: int | None
-    """0 or 1 for the first or the second model, None where the odds are below 20 to 1: undecided."""
+    """0 or 1 for the first or the second model, None where the odds are below 10 to 1: undecided."""
     remark: str
     """The same in plain words, with the odds."""
 
@@ -836,6 +863,4 @@ def _surface(line: _Line, search: Search) -> Surface:
         rms.append(np.sqrt(np.maximum(left, 0.0) / line.observed.size))
         likelihood.append(marginal.ravel() / search.tempering)
     every = np.concatenate(likelihood)
-    return Surface(
-        np.concatenate(te), np.concatenate(breaks), np.concatenate(rms), np.exp(every - every.max())
-    )
+    return Surface(np.concatenate(te), np.concatenate(breaks), np.concatenate(rms), np.exp(every - every.max()))

@@ -12,7 +12,8 @@ import numpy as np
 from . import check
 from .errors import DownwarpError
 
-
+SPREAD_STATIONS = 9
+"""Neighbouring stations whose strips together give the spread at the middle one."""
 LEAST_INDEPENDENT = 1.5
 """Independent strips that two or more strips count as at the least."""
 
@@ -26,7 +27,7 @@ class Swath:
     sigma: np.ndarray
     """Standard error of that mean (see `combine`); NaN where fewer than two strips have a value."""
     spread: np.ndarray
-    """Standard deviation between strips (with count - 1); NaN where fewer than two strips have a value."""
+    """Standard deviation between strips about their own levels; NaN where fewer than two strips have a value."""
     count: np.ndarray
     """Strips that have a value."""
     likeness: float
@@ -70,19 +71,35 @@ def combine(values: np.ndarray) -> Swath:
     other where they are closer together than the relief is wide; with r the correlation of their departures from the
     mean, ``count`` strips are worth n = count (1 - r) / (1 + r) independent ones, at least `LEAST_INDEPENDENT` (a
     first-order autoregression across the swath; von Storch & Zwiers, Statistical Analysis in Climate Research, section
-    6.6, from memory), and sigma is spread sqrt((1 - 1 / count) / (n - 1)).
+    6.6, from memory), and sigma is spread sqrt((1 - 1 / count) / (n - 1)). The spread is that of `SPREAD_STATIONS`
+    neighbouring stations together, about each strip's own level.
     """
     values = _strips(values)
     known = np.isfinite(values)
     count = known.sum(axis=0)
     mean = np.where(count > 0, np.where(known, values, 0.0).sum(axis=0) / np.maximum(count, 1), np.nan)
     departures = np.where(known, values - mean, 0.0)
-    spread = np.where(count > 1, np.sqrt((departures**2).sum(axis=0) / np.maximum(count - 1, 1)), np.nan)
+    # A strip that lies deeper as a whole tells of the depth along strike, which the regional level takes up.
+    held = known.sum(axis=1, keepdims=True)
+    level = np.where(held >= SPREAD_STATIONS, departures.sum(axis=1, keepdims=True) / np.maximum(held, 1), 0.0)
+    departures = np.where(known, departures - level, 0.0)
+    variance = _smoothed((departures**2).sum(axis=0), np.maximum(count - 1, 0))
+    spread = np.where(count > 1, np.sqrt(variance), np.nan)
     likeness = _likeness(departures, known)
     independent = np.maximum(count * (1.0 - likeness) / (1.0 + likeness), LEAST_INDEPENDENT)
     # The spread about their own mean misses what the strips have in common; this is spread / sqrt(count) at r = 0.
     sigma = spread * np.sqrt(np.maximum(count - 1, 0) / np.maximum(count, 1) / (independent - 1.0))
     return Swath(mean, sigma, spread, count, likeness)
+
+
+def _smoothed(squares: np.ndarray, freedom: np.ndarray) -> np.ndarray:
+    """Variance from sums of squares and their degrees of freedom over the `SPREAD_STATIONS` around each station: a few
+    strips alone give it to no better than half its size."""
+    window = np.ones(SPREAD_STATIONS)
+    total, free = (np.convolve(values, window, mode="full") for values in (squares, freedom.astype(float)))
+    margin = SPREAD_STATIONS // 2
+    inside = slice(margin, margin + squares.size)
+    return total[inside] / np.maximum(free[inside], 1.0)
 
 
 def _likeness(departures: np.ndarray, known: np.ndarray) -> float:

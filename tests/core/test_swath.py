@@ -19,16 +19,27 @@ def test_offsets_are_the_centre_lines_of_equal_strips():
 
 
 def test_mean_and_sigma_agree_with_numpy():
-    """Independent reference: numpy.nanmean and numpy.nanstd(ddof=1) / sqrt(count)."""
+    """Independent reference: numpy.nanmean; numpy.nanstd(ddof=1) of independent strips, pooled over the line, to 3 %."""
     random = np.random.default_rng(4)
-    values = random.normal(-3000, 100, (9, 40))
+    values = random.normal(-3000, 100, (9, 400))
     values[random.random(values.shape) < 0.2] = np.nan
     result = swath.combine(values)
     count = np.isfinite(values).sum(axis=0)
     np.testing.assert_array_equal(result.count, count)
     np.testing.assert_allclose(result.mean, np.nanmean(values, axis=0))
-    np.testing.assert_allclose(result.spread, np.nanstd(values, axis=0, ddof=1))
-    np.testing.assert_allclose(result.sigma, np.nanstd(values, axis=0, ddof=1) / np.sqrt(count))
+    spread = np.nanstd(values, axis=0, ddof=1)
+    assert np.sqrt(np.mean(result.spread**2)) == pytest.approx(np.sqrt(np.mean(spread**2)), rel=0.03)
+    assert np.sqrt(np.mean(result.sigma**2)) == pytest.approx(np.sqrt(np.mean(spread**2 / count)), rel=0.05)
+
+
+def test_spread_follows_the_relief_and_not_the_strips_levels():
+    """A spread of 20 m that grows to 100 m half way along, on strips whose levels differ by hundreds of metres."""
+    random = np.random.default_rng(6)
+    size = np.where(np.arange(400) < 200, 20.0, 100.0)
+    values = np.linspace(-500.0, 500.0, 15)[:, None] + size * random.standard_normal((15, 400))
+    result = swath.combine(values)
+    assert np.median(result.spread[10:190]) == pytest.approx(20.0, rel=0.05)
+    assert np.median(result.spread[210:390]) == pytest.approx(100.0, rel=0.05)
 
 
 def test_sigma_is_what_the_mean_of_independent_strips_scatters_by():
