@@ -280,7 +280,7 @@ class ScalarsForOne(Geod):
 
     @staticmethod
     def _plain(results):
-        return tuple(float(values[0]) if np.size(values) == 1 else values for values in results)
+        return tuple(np.ravel(values)[0].item() if np.size(values) == 1 else values for values in results)
 
 
 def test_a_pyproj_that_returns_scalars_for_arrays_of_one():

@@ -61,7 +61,7 @@ class Headless:
 
     def attempt(self, algorithm: str, parameters: dict[str, object]) -> subprocess.CompletedProcess[str]:
         """Run ``downwarp:<algorithm>``; what it printed on standard output is JSON where it succeeded."""
-        return self.call("--json", "run", f"downwarp:{algorithm}", *_arguments(parameters))
+        return self.call("--json", "run", f"downwarp:{algorithm}", *arguments_of(parameters))
 
     def run(self, algorithm: str, parameters: dict[str, object]) -> dict:
         """Run ``downwarp:<algorithm>`` and return its results; raises RuntimeError with its last words if it fails."""
@@ -73,7 +73,8 @@ class Headless:
         return json.loads(done.stdout)["results"]
 
 
-def _arguments(parameters: dict[str, object]) -> list[str]:
+def arguments_of(parameters: dict[str, object]) -> list[str]:
+    """Parameters as qgis_process takes them."""
     arguments = []
     for key, value in parameters.items():
         for item in value if isinstance(value, (list, tuple)) else [value]:

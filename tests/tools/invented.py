@@ -45,6 +45,29 @@ def trench(distance_km, te_km: float = TE_KM):
     return LEVEL + TILT * plate - bent(plate, te_km) + 0.06 * np.maximum(-beyond, 0.0)
 
 
+RIDGE_KM, HALF_WIDTH_KM, HEIGHT, FLOOR = 135 * CELL * KM_PER_DEGREE, 60.0, 3000.0, -5000.0
+"""The ridge: its crest on a station, its half width, its height above the sea floor, m, and that, m up."""
+RIDGE_TE_KM, ROCK = 20.0, 2800.0
+
+
+def ridge(distance_km, te_km: float = RIDGE_TE_KM):
+    """Relief, m up, of a ridge on a continuous plate under water: the ridge itself, elsewhere the bent sea floor.
+
+    The deflection is the ridge's load times the line load's w = alpha^3 e^-s (cos s + sin s) / 8 D (Turcotte &
+    Schubert, Geodynamics, section 3.16, from memory), summed over strips 250 m wide.
+    """
+    x = np.asarray(distance_km, dtype=float)
+    rigidity = YOUNG * (te_km * 1e3) ** 3 / (12 * (1 - POISSON**2))
+    alpha = (4 * rigidity / ((MANTLE - WATER) * GRAVITY)) ** 0.25
+    width = 0.25
+    strips = np.arange(-HALF_WIDTH_KM + width / 2, HALF_WIDTH_KM, width)
+    force = (ROCK - WATER) * GRAVITY * HEIGHT * np.cos(0.5 * np.pi * strips / HALF_WIDTH_KM) ** 2 * width * 1e3
+    s = np.abs(x[..., None] - RIDGE_KM - strips) * 1e3 / alpha
+    bend = (alpha**3 / (8 * rigidity) * np.exp(-s) * (np.cos(s) + np.sin(s))) @ force
+    across = np.abs(x - RIDGE_KM) / HALF_WIDTH_KM
+    return np.where(across < 1, FLOOR + HEIGHT * np.cos(0.5 * np.pi * np.minimum(across, 1)) ** 2, FLOOR - bend)
+
+
 def write_grid(path: Path, values, left: float, top: float, cell: float, crs: str | None = "EPSG:4326", nodata=None):
     """Write rows from the top (or bands of rows) as a GeoTIFF and return its path as text."""
     bands = np.asarray(values, dtype=float)
