@@ -636,7 +636,7 @@ def _highest_density(values: np.ndarray, weight: np.ndarray, confidence: float, 
 def _mixture_quantile(mean: np.ndarray, spread: np.ndarray, weight: np.ndarray, probability: float) -> np.ndarray:
     """Quantile of a mixture of normals by bisection; mean and spread (components, points), weight (components,)."""
     low, high = (mean - 8.0 * spread).min(axis=0), (mean + 8.0 * spread).max(axis=0)
-    safe = np.maximum(spread, 1e-300)
+    safe = np.maximum(spread, 1e-12 * np.abs(mean) + 1e-100)  # a spread of 0 is a step
     for _ in range(40):
         middle = 0.5 * (low + high)
         below = weight @ ndtr((middle - mean) / safe) < probability
