@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 from qgis.core import Qgis, QgsApplication, QgsMessageLog
 
 if TYPE_CHECKING:
+    from .panel.window import Window
     from .provider import DownwarpProvider
 
 TITLE = "Downwarp"
@@ -21,6 +22,7 @@ class DownwarpPlugin:
     def __init__(self, iface) -> None:
         self.iface = iface
         self.provider: DownwarpProvider | None = None
+        self.window: Window | None = None
 
     def initProcessing(self) -> None:
         """Register the provider: all that qgis_process asks of a plugin."""
@@ -38,11 +40,19 @@ class DownwarpPlugin:
         QgsApplication.processingRegistry().addProvider(self.provider)
 
     def initGui(self) -> None:
-        """Start in a window."""
+        """Start in a window, or without one where ``iface`` is None."""
         self.initProcessing()
+        # Without the provider there is nothing that the window could do; the reason has been said.
+        if self.iface is not None and self.provider is not None and self.window is None:
+            from .panel.window import Window
+
+            self.window = Window(self.iface)
 
     def unload(self) -> None:
         """Take back what was registered."""
+        if self.window is not None:
+            self.window.shut()
+            self.window = None
         if self.provider is not None:
             QgsApplication.processingRegistry().removeProvider(self.provider)
             self.provider = None

@@ -5,6 +5,7 @@ from __future__ import annotations
 from qgis.core import (
     Qgis,
     QgsCategorizedSymbolRenderer,
+    QgsFeatureRequest,
     QgsFillSymbol,
     QgsGraduatedSymbolRenderer,
     QgsLineSymbol,
@@ -59,7 +60,9 @@ def _placement(name: str):
     return getattr(owner, name)
 
 
-def _label(layer: QgsVectorLayer, expression: str, size: float, placement: str, distance: float = 0.0, bold=False) -> None:
+def _label(
+    layer: QgsVectorLayer, expression: str, size: float, placement: str, distance: float = 0.0, bold: bool = False
+) -> None:
     settings = QgsPalLayerSettings()
     settings.fieldName = expression
     settings.isExpression = True
@@ -86,13 +89,12 @@ def _profiles(layer: QgsVectorLayer) -> None:
     _at_last_vertex(head)
     symbol.appendSymbolLayer(head)
     layer.setRenderer(QgsSingleSymbolRenderer(symbol))
-    unknown, open_side = tr("not resolved"), tr("open")
-    expression = (
-        '"transect" || \'\\n\' || if("te_km" is null, \'' + _quoted(unknown) + "', "
-        "format_number(\"te_km\", 1) || ' km' || if(\"te_low_km\" is null and \"te_high_km\" is null, '', "
-        "' (' || coalesce(format_number(\"te_low_km\", 1), '" + _quoted(open_side) + "') || ' – ' || "
-        "coalesce(format_number(\"te_high_km\", 1), '" + _quoted(open_side) + "') || ')'))"
-    )
+    unknown, open_side, between = (_quoted(tr(word)) for word in ("not resolved", "open", "to"))
+    low, high = (f"coalesce(format_number(\"te_{side}_km\", 1), '{open_side}')" for side in ("low", "high"))
+    interval = f"' (' || {low} || ' {between} ' || {high} || ')'"
+    both_open = '"te_low_km" is null and "te_high_km" is null'
+    thickness = f"format_number(\"te_km\", 1) || ' km' || if({both_open}, '', {interval})"
+    expression = f"\"transect\" || '\\n' || if(\"te_km\" is null, '{unknown}', {thickness})"
     _label(layer, expression, 9.0, "Line", 1.2, bold=True)
 
 
@@ -134,14 +136,19 @@ def _station(colour: str) -> QgsMarkerSymbol:
     symbol = _marker("circle", colour, 2.2)
     layer = symbol.symbolLayer(0)
     fitted = QgsProperty.fromExpression(f"if(\"in_fit\" = 1, '{INK}', '{PALE}')")
-    layer.setDataDefinedProperty(QgsSymbolLayer.Property.PropertyStrokeColor, fitted)
+    layer.setDataDefinedProperty(_property("StrokeColor"), fitted)
     smaller = QgsProperty.fromExpression('if("in_fit" = 1, 2.2, 1.7)')
-    layer.setDataDefinedProperty(QgsSymbolLayer.Property.PropertySize, smaller)
+    layer.setDataDefinedProperty(_property("Size"), smaller)
     return symbol
 
 
+def _property(name: str):
+    """A property that may be data-defined; until 3.36 its name began with Property."""
+    return getattr(QgsSymbolLayer.Property, name, None) or getattr(QgsSymbolLayer.Property, f"Property{name}")
+
+
 def _plain(value: float) -> str:
-    return f"{value:,.0f}".replace("-", "−")
+    return f"{value:,.0f}"
 
 
 def _largest(layer: QgsVectorLayer, field: str) -> float | None:
@@ -149,12 +156,20 @@ def _largest(layer: QgsVectorLayer, field: str) -> float | None:
     index = layer.fields().lookupField(field)
     if index < 0:
         return None
-    ends = [value for value in (layer.minimumValue(index), layer.maximumValue(index)) if isinstance(value, (int, float))]
-    largest = max((abs(value) for value in ends), default=0.0)
+    values = (feature.attribute(index) for feature in layer.getFeatures(_only(index)))
+    largest = max((abs(value) for value in values if isinstance(value, float)), default=0.0)
     if not largest > 0:
         return None
     unit = 10.0 ** (len(f"{largest:.0f}") - 2)
     return float(-(-largest // unit) * unit)
+
+
+def _only(index: int) -> QgsFeatureRequest:
+    """A request for one field; the smallest and largest value that QGIS offers are no numbers where all are NULL."""
+    request = QgsFeatureRequest()
+    request.setFlags(QgsFeatureRequest.Flag.NoGeometry)
+    request.setSubsetOfAttributes([index])
+    return request
 
 
 MARKERS = {
@@ -203,6 +218,14 @@ def _in_elevation(layer: QgsVectorLayer, is_line: bool) -> None:
         properties.setType(Qgis.VectorProfileType.ContinuousSurface)
     if hasattr(properties, "setProfileFillSymbol"):
         properties.setProfileFillSymbol(QgsFillSymbol.createSimple({"color": "31,111,132,60", "outline_style": "no"}))
+
+
+def style_drawn(layer: QgsVectorLayer) -> None:
+    """The look of transects that are drawn by hand and not fitted yet: thin, with a pale edge and their name."""
+    symbol = QgsLineSymbol.createSimple({"line_color": PALE, "line_width": "1.2", "capstyle": "round"})
+    symbol.appendSymbolLayer(QgsSimpleLineSymbolLayer(QColor(LOAD), 0.6))
+    layer.setRenderer(QgsSingleSymbolRenderer(symbol))
+    _label(layer, '"name"', 8.0, "Line", 0.8)
 
 
 _STYLES = {"PROFILES": _profiles, "STATIONS": _stations, "MARKERS": _markers}

@@ -40,6 +40,7 @@ SETTINGS = (
     "Load removed (ice, lake, erosion)",
     "None of these",
 )
+# An input's default does not reach a child where qgis_process leaves the input out, hence none for what must be chosen.
 LEFT, MIDDLE, RIGHT, ROW = 150, 500, 850, 110
 
 
@@ -90,7 +91,7 @@ def front_line_to_fitted_margin() -> QgsProcessingModelAlgorithm:
             QgsProcessingParameterFeatureSource("front_line", "Front line", LINE),
             QgsProcessingParameterRasterLayer("relief", "Relief, m up"),
             QgsProcessingParameterRasterLayer("bent_surface", "Bent surface, m up", None, True),
-            QgsProcessingParameterEnum("setting", "Setting", SETTINGS, False, 2),
+            QgsProcessingParameterEnum("setting", "Setting", SETTINGS),
             QgsProcessingParameterNumber("spacing", "Spacing, km", number, 25.0),
             QgsProcessingParameterNumber("length", "Length of the transects, km", number, 400.0),
             QgsProcessingParameterBoolean("right_to_left", "Run from the front line's right to its left", False),
@@ -137,7 +138,7 @@ def raster_and_picks_to_report() -> QgsProcessingModelAlgorithm:
             QgsProcessingParameterRasterLayer("bent_surface", "Bent surface, m up", None, True),
             QgsProcessingParameterFeatureSource("picks", "Picks of the bent surface", POINT),
             QgsProcessingParameterField("pick_elevation", "Field with their elevation, m up", None, "picks"),
-            QgsProcessingParameterEnum("setting", "Setting", SETTINGS, False, 2),
+            QgsProcessingParameterEnum("setting", "Setting", SETTINGS),
         ],
     )
     _child(

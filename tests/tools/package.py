@@ -17,7 +17,7 @@ from pathlib import Path
 CHECKOUT = Path(__file__).resolve().parents[2]
 FILES = ("__init__.py", "metadata.txt", "LICENSE", "README.md", "CHANGELOG.md")
 FOLDERS = ("plugin", "algorithms", "icons")
-SUFFIXES = {".json", ".model3", ".py", ".qml", ".svg"}
+SUFFIXES = {".html", ".json", ".model3", ".png", ".py", ".svg"}
 
 
 def metadata(checkout: Path = CHECKOUT) -> configparser.SectionProxy:

@@ -1,0 +1,1 @@
+"""What Downwarp shows in a QGIS window: the map tool that draws transects and the profile panel."""
