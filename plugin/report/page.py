@@ -145,7 +145,11 @@ class Report:
 
     def page(self) -> str:
         """The whole page."""
-        answers, overview = self._answers(), self._overview()
+        return self.document((self._answers(), self._overview(), *self._sections, _METHOD, _CAUTIONS))
+
+    def document(self, sections: Iterable[str]) -> str:
+        """A page of sections, with what it takes to repeat the run."""
+        sections = list(sections)
         letters = "".join(self._glyphs[name] for name in sorted(self._glyphs))
         title = escaped(self._title)
         inputs = [(escaped(key), escaped(value)) for key, value in self._inputs.items()]
@@ -158,11 +162,7 @@ class Report:
             f'<svg class="letters" aria-hidden="true"><defs>{letters}</defs></svg>' if letters else "",
             "<main>",
             f'<p class="note">{escaped(self._missing)}</p>' if self._missing else "",
-            answers,
-            overview,
-            *self._sections,
-            _METHOD,
-            _CAUTIONS,
+            *sections,
             "<section><h2>To repeat this run</h2>",
             _table(("input", "value"), inputs, "Inputs", free=1),
             _table(("software", "version"), versions, "Versions"),

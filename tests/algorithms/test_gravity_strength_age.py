@@ -65,7 +65,7 @@ def test_gravity_of_the_known_plate_agrees(fitted, tmp_path):
     anomalies = found["ANOMALIES"]
     parts = column(anomalies, "load_mgal") + column(anomalies, "surface_mgal") + column(anomalies, "moho_mgal")
     assert parts == pytest.approx(column(anomalies, "free_air_mgal"), abs=1e-6)
-    assert list(anomalies[0])[:-1][-len(FIELDS["ANOMALIES"]):] == list(FIELDS["ANOMALIES"])
+    assert list(anomalies[0])[:-1][-len(FIELDS["ANOMALIES"]) :] == list(FIELDS["ANOMALIES"])
     text = report.read_text(encoding="utf-8")
     assert "a &amp; b" in text and "no faulting" in text.lower() and "elastic and steady" in text
     assert "<svg" in text and not re.search(r"(src|href)=\"http", text)

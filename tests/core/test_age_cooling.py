@@ -108,7 +108,7 @@ def test_age_of_a_heat_flow_and_back():
 @pytest.mark.parametrize(
     ("values", "words"),
     [
-        ({"age": None}, "AGE_MYR is nan"),
+        ({}, "AGE_MYR is nan"),
         ({"age": -MYR}, "AGE_MYR is -1; it takes a number above 0"),
         ({"age": MYR, "mantle": -5.0}, "MANTLE_C is -5"),
         ({"kind": STEADY}, "HEAT_FLOW is nan"),

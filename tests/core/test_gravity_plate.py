@@ -156,9 +156,7 @@ def test_round_and_strip_agree_where_the_load_is_a_strip():
     x = np.arange(0, 1400e3 + 1, 4e3)
     height = 1500.0 * np.exp(-(((x - 1000e3) / 40e3) ** 2))
     under = height > 1.0
-    section = Section(
-        x, -4e3 + height, np.full(x.shape, -4e3), 0.3 * height, np.full(x.shape, 2500.0), under, -4e3
-    )
+    section = Section(x, -4e3 + height, np.full(x.shape, -4e3), 0.3 * height, np.full(x.shape, 2500.0), under, -4e3)
     near = x[(x > 850e3) & (x < 1150e3)]
     strip, ring = (anomaly(section, CRUST, near, HELD, shape).free_air for shape in (STRIP, ROUND))
     assert np.abs(strip - ring).max() < 0.01 * np.abs(strip).max()
