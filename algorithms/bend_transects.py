@@ -2,8 +2,12 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
+import numpy as np
+
 from ..plugin.bridge import keys
-from ..plugin.bridge.options import bend_options
+from ..plugin.bridge.options import bend_options, check_thickness_field, stated_thickness
 from ..plugin.bridge.outputs import add_sinks
 from ..plugin.bridge.rows import bent_row
 from ..plugin.bridge.transect_algorithm import TransectAlgorithm
@@ -14,8 +18,8 @@ class BendTransects(TransectAlgorithm):
     """Samples the load along lines and bends a plate of stated thickness under it."""
 
     keys = (
-        keys.LINES + keys.RELIEF + keys.SETTING + keys.BEND + keys.BEND_BREAK + keys.LOAD + keys.LOAD_AREA
-        + keys.DENSITIES + keys.CONSTANTS + keys.STATIONS
+        keys.LINES + keys.RELIEF + keys.SETTING + keys.BEND + keys.THICKNESS_ALONG + keys.BEND_BREAK
+        + keys.LOAD + keys.LOAD_AREA + keys.LOAD_SHAPE + keys.DENSITIES + keys.CONSTANTS + keys.STATIONS
     )  # fmt: skip
 
     def add_outputs(self) -> None:
@@ -25,10 +29,25 @@ class BendTransects(TransectAlgorithm):
         super().check(values)
         bend_options(values)
 
+    def resolve(self, values, parameters, context) -> None:
+        super().resolve(values, parameters, context)
+        check_thickness_field(values, self._source)
+        self._values = values
+
+    def options_for(self, feature):
+        return bend_options(self._values, stated_thickness(self._values, feature, self._name(feature)))
+
+    def _sample(self, feature, progress):
+        track, profile = super()._sample(feature, progress)
+        if self._values.given("TE_FIELD"):
+            thickness = stated_thickness(self._values, feature, profile.name)
+            profile = replace(profile, thickness=np.full(profile.distance.shape, thickness))
+        return track, profile
+
     def carry_out(self, parameters, context, feedback):
         values = self.values(parameters, context)
         options = bend_options(values)
-        thickness = values.required_number("TE_KM") * 1e3
+        thickness = stated_thickness(values)
 
         def bend(profile, progress):
             return bend_profile(

@@ -13,8 +13,9 @@ class FitStations(DownwarpAlgorithm):
     """Fits a plate to stations that are already there."""
 
     keys = (
-        keys.STATION_FIELDS + keys.SETTING + keys.PLATE_SEARCH + keys.BREAK + keys.BREAK_SEARCH + keys.LOAD
-        + keys.FORCES_AND_REGIONAL + keys.DENSITIES + keys.CONSTANTS + keys.WINDOW + keys.WEIGHTS + keys.WORKERS
+        keys.STATION_FIELDS + keys.SETTING + keys.PLATE_SEARCH + keys.BREAK + keys.BREAK_SEARCH + keys.ZONES
+        + keys.LOAD + keys.FORCES_AND_REGIONAL + keys.DENSITIES + keys.CONSTANTS + keys.WINDOW + keys.WEIGHTS
+        + keys.WORKERS
     )  # fmt: skip
 
     def add_outputs(self) -> None:

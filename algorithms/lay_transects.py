@@ -43,10 +43,13 @@ class LayTransects(DownwarpAlgorithm):
         laid = list(lay(self._source, values))
         if not laid:
             raise DownwarpError("There is nothing to lay transects across: the input holds no feature.")
-        outputs.open(("TRANSECTS",))
-        for row, geometry in laid:
-            outputs.add("TRANSECTS", row, geometry)
-            if row["remarks"]:
-                feedback.pushWarning(f"Transect {row['name']}: {row['remarks']}")
-        outputs.flush()
+        try:
+            outputs.open(("TRANSECTS",))
+            for row, geometry in laid:
+                outputs.add("TRANSECTS", row, geometry)
+                if row["remarks"]:
+                    feedback.pushWarning(f"Transect {row['name']}: {row['remarks']}")
+            outputs.flush()
+        finally:
+            outputs.discard()
         return outputs.results

@@ -2,10 +2,8 @@
 
 from __future__ import annotations
 
-from qgis.core import QgsGeometry, QgsPoint
-
 from ..plugin.bridge import keys, rows
-from ..plugin.bridge.outputs import add_sinks
+from ..plugin.bridge.outputs import add_sinks, place
 from ..plugin.bridge.transect_algorithm import TransectAlgorithm
 
 
@@ -26,4 +24,4 @@ class SampleTransects(TransectAlgorithm):
     def _write(sinks, profile, track) -> None:
         stations = rows.as_rows(profile.name, rows.sampled_columns(profile))
         for row, x, y, z in zip(stations, track.x.tolist(), track.y.tolist(), profile.relief.tolist()):
-            sinks.add("STATIONS", row, QgsGeometry(QgsPoint(x, y, z)))
+            sinks.add("STATIONS", row, place(x, y, z))

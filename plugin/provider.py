@@ -7,12 +7,17 @@ from pathlib import Path
 from qgis.core import QgsProcessingAlgorithm, QgsProcessingProvider
 from qgis.PyQt.QtGui import QIcon
 
+from ..algorithms.age_thickness import AgeThickness
 from ..algorithms.bend_transects import BendTransects
+from ..algorithms.check_strip import CheckStrip
 from ..algorithms.demo_layers import DemoLayers
 from ..algorithms.fit_stations import FitStations
 from ..algorithms.fit_transects import FitTransects
+from ..algorithms.gravity_transects import GravityTransects
 from ..algorithms.lay_transects import LayTransects
+from ..algorithms.plate_strength import PlateStrength
 from ..algorithms.sample_transects import SampleTransects
+from .bridge.destinations import FORMATS
 
 ICON = Path(__file__).resolve().parents[1] / "icons" / "downwarp.svg"
 
@@ -23,6 +28,10 @@ ALGORITHMS: tuple[type[QgsProcessingAlgorithm], ...] = (
     SampleTransects,
     FitStations,
     LayTransects,
+    CheckStrip,
+    GravityTransects,
+    PlateStrength,
+    AgeThickness,
     DemoLayers,
 )
 
@@ -45,6 +54,10 @@ class DownwarpProvider(QgsProcessingProvider):
     def svgIconPath(self) -> str:
         """The same icon for QGIS to scale."""
         return str(ICON)
+
+    def supportedOutputVectorLayerExtensions(self) -> list[str]:
+        """The formats that the window offers for outputs; the first is the usual one."""
+        return list(FORMATS)
 
     def loadAlgorithms(self) -> None:
         """Called by QGIS whenever the list is (re)built."""

@@ -1,6 +1,7 @@
 """The plugin as users get it: what is in the zip, what its metadata says, that QGIS loads it and takes it back."""
 
 import configparser
+import json
 import os
 import re
 import subprocess
@@ -8,11 +9,15 @@ import sys
 import zipfile
 from pathlib import Path
 
+import demo
 import package
 import pytest
 from headless import CHECKOUT, Headless
 
-ALGORITHMS = {"fittransects", "bendtransects", "sampletransects", "fitstations", "laytransects", "demolayers"}
+ALGORITHMS = {
+    "fittransects", "bendtransects", "sampletransects", "fitstations", "laytransects", "checkstrip", "gravitytransects",
+    "platestrength", "agethickness", "demolayers",
+}  # fmt: skip
 DEPENDENCIES = ("numpy", "scipy", "shapely", "pyproj", "matplotlib")
 
 
@@ -113,6 +118,22 @@ def test_zip_loads_into_a_fresh_profile(installed, tmp_path, name):
     assert enabled.returncode == 0, enabled.stderr
     assert "Traceback" not in enabled.stdout + enabled.stderr
     assert qgis.algorithms() == ALGORITHMS
+
+
+def test_demo_runs_from_the_zip_in_a_fresh_profile(archive, tmp_path):
+    """Unpacked where QGIS installs plugins, with no other trace of it: the demo is made, and a scenario fitted."""
+    qgis = Headless(tmp_path / "qgis", tmp_path / "nowhere")
+    del qgis.environment["QGIS_PLUGINPATH"]
+    plugins = tmp_path / "qgis" / "profile" / "profiles" / "default" / "python" / "plugins"
+    with zipfile.ZipFile(archive) as opened:
+        opened.extractall(plugins)
+    enabled = qgis.enable()
+    assert enabled.returncode == 0, enabled.stderr
+    layers = tmp_path / "layers"
+    qgis.run("demolayers", {"OUTPUT_FOLDER": str(layers)})
+    scenario = json.loads((layers / "demo.json").read_text(encoding="utf-8"))["scenarios"][0]
+    _, truth, fitted, _, _ = demo.fit(qgis, layers, scenario)
+    assert float(fitted) == pytest.approx(float(truth), rel=0.15)
 
 
 @pytest.mark.parametrize("absent", ["scipy", "shapely"])

@@ -20,6 +20,7 @@ from qgis.PyQt.QtGui import QIcon
 from ..core.errors import Cancelled, DownwarpError
 from .fields import FIELDS
 from .keys import Key, Values, tr
+from .threads import ready_pyproj
 
 ICON = Path(__file__).resolve().parents[2] / "icons" / "downwarp.svg"
 SHARED_HELP = "shared.json"
@@ -148,6 +149,7 @@ class DownwarpAlgorithm(QgsProcessingAlgorithm):
 
     def processAlgorithm(self, parameters, context, feedback):
         """Read, call and write."""
+        ready_pyproj()
         with _translated_errors():
             return self.carry_out(parameters, context, feedback)
 

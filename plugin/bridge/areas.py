@@ -6,7 +6,7 @@ import numpy as np
 import shapely.geometry
 import shapely.ops
 import shapely.wkb
-from qgis.core import QgsFeatureSource
+from qgis.core import QgsFeatureSource, QgsGeometry, QgsWkbTypes
 
 from ..core.errors import DownwarpError
 from .frames import Frame, full_turn, transformer
@@ -33,8 +33,16 @@ class Areas:
         polygons = []
         for feature in source.getFeatures():
             geometry = feature.geometry()
-            if not geometry.isNull() and not geometry.isEmpty():
-                polygons.append(shapely.wkb.loads(bytes(geometry.asWkb())).buffer(0))
+            if geometry.isNull() or geometry.isEmpty():
+                continue
+            if geometry.type() != QgsWkbTypes.GeometryType.PolygonGeometry:
+                kind = QgsWkbTypes.displayString(geometry.wkbType())
+                raise DownwarpError(f"{label}: feature {feature.id()} is no polygon but {kind}.")
+            if not np.isfinite([(vertex.x(), vertex.y()) for vertex in geometry.vertices()]).all():
+                raise DownwarpError(f"{label}: feature {feature.id()} has a vertex that is not finite.")
+            # shapely knows no curves.
+            straight = QgsGeometry(geometry.constGet().segmentize())
+            polygons.append(shapely.wkb.loads(bytes(straight.asWkb())).buffer(0))
         if not polygons:
             raise DownwarpError(f"{label} holds no polygon.")
         self._area = shapely.ops.unary_union(polygons)

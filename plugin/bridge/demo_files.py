@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import shutil
 from collections.abc import Iterable
 from pathlib import Path
 
@@ -27,14 +28,34 @@ from qgis.PyQt.QtCore import QByteArray
 from ..core import demo
 from ..core.errors import DownwarpError
 from ..core.settings import FORELAND, VOLCANO
+from .destinations import folder_in, replace_file
 from .fields import TYPES
 
 NODATA = -32768.0
 
 
 def write_demo(folder: Path, noise: float, seed: int) -> list[Path]:
-    """Write the demo into ``folder`` and return its layers, those to be drawn on top last."""
-    folder.mkdir(parents=True, exist_ok=True)
+    """Write the demo into ``folder`` and return its layers, those to be drawn on top last.
+
+    Files of an earlier demo are replaced once the new ones are complete.
+    """
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        part = folder_in(folder)
+    except OSError as error:
+        raise DownwarpError(f"OUTPUT_FOLDER: {folder} cannot be written: {error.strerror}.") from None
+    try:
+        layers = _write(part, noise, seed)
+        for path in sorted(part.iterdir()):
+            replace_file(path, folder / path.name)
+    except OSError as error:
+        raise DownwarpError(f"OUTPUT_FOLDER: {folder} cannot be written: {error.strerror}.") from None
+    finally:
+        shutil.rmtree(part, ignore_errors=True)
+    return [folder / layer.name for layer in layers]
+
+
+def _write(folder: Path, noise: float, seed: int) -> list[Path]:
     rng = np.random.default_rng(seed)
     grids = demo.demo_grids(noise, rng)
     relief, basement = folder / "relief.tif", folder / "basement.tif"
@@ -103,13 +124,13 @@ def _write_raster(path: Path, grid: np.ndarray) -> None:
         Qgis.DataType.Float32, columns, rows, extent, QgsCoordinateReferenceSystem(demo.CRS)
     )
     if provider is None or not provider.isValid():
-        raise DownwarpError(f"OUTPUT_FOLDER: {path} cannot be written.")
+        raise DownwarpError(f"OUTPUT_FOLDER: {path.name} cannot be written.")
     values = np.where(np.isfinite(grid), grid, NODATA).astype(np.float32)
     block = QgsRasterBlock(Qgis.DataType.Float32, columns, rows)
     block.setData(QByteArray(values.tobytes()))
     provider.setNoDataValue(1, NODATA)
     if not provider.writeBlock(block, 1):
-        raise DownwarpError(f"OUTPUT_FOLDER: {path} cannot be written.")
+        raise DownwarpError(f"OUTPUT_FOLDER: {path.name} cannot be written.")
 
 
 def _write_vector(path: Path, fields: dict[str, str], kind, features: Iterable[tuple[list, QgsGeometry]]) -> None:
@@ -128,7 +149,7 @@ def _write_vector(path: Path, fields: dict[str, str], kind, features: Iterable[t
         options,
     )
     if writer.hasError() != QgsVectorFileWriter.WriterError.NoError:
-        raise DownwarpError(f"OUTPUT_FOLDER: {path} cannot be written: {writer.errorMessage()}.")
+        raise DownwarpError(f"OUTPUT_FOLDER: {path.name} cannot be written: {writer.errorMessage()}.")
     for attributes, geometry in features:
         feature = QgsFeature(layout)
         feature.setAttributes(attributes)

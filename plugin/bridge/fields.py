@@ -19,7 +19,7 @@ try:  # QGIS built on Qt 6 has no QVariant type names, older ones do not take QM
     }
     QgsField("probe", TYPES["real"])
 except (ImportError, AttributeError, TypeError):
-    TYPES = {"text": QVariant.String, "real": QVariant.Double, "whole": QVariant.Int}
+    TYPES = {"text": QVariant.Type.String, "real": QVariant.Type.Double, "whole": QVariant.Type.Int}
 
 _TEXT = {
     "transect",
@@ -32,6 +32,8 @@ _TEXT = {
     "choice",
     "option",
     "remarks",
+    "verdict",
+    "source",
     "name",
     "guide",
 }
@@ -43,7 +45,8 @@ FIELDS: dict[str, tuple[str, ...]] = {
         "break_km", "break_low_km", "break_high_km", "end_shear_n_per_m", "end_moment_n", "regional_level_m",
         "regional_tilt_m_per_km", "rms_m", "stations_fit", "stations_effective", "deepest_m", "deepest_km", "node_km",
         "bulge_m", "bulge_km", "young_gpa", "poisson", "gravity_m_s2", "rho_mantle", "rho_infill", "rho_load",
-        "remarks",
+        "remarks", "te_near_km", "te_near_low_km", "te_near_high_km", "zone_change_km", "zone_change_low_km",
+        "zone_change_high_km",
     ),
     "STATIONS": (
         "transect", "distance_km", "dem_m", "load_mpa", "observed_m", "sigma_m", "in_fit", "deflection_m",
@@ -55,6 +58,39 @@ FIELDS: dict[str, tuple[str, ...]] = {
     "MISFIT": ("transect", "plate", "te_km", "break_km", "rms_m", "relative_likelihood"),
     "TRANSECTS": ("name", "guide", "along_km", "azimuth_deg", "remarks"),
     "CHOICES": ("transect", "choice", "option", "te_km", "te_low_km", "te_high_km", "rms_m"),
+    "CHECKS": (
+        "transect", "setting", "te_km", "rigidity_nm", "flexural_parameter_km", "strip_deepest_m", "strip_deepest_km",
+        "strip_node_km", "strip_bulge_m", "strip_bulge_km", "mapped_deepest_m", "mapped_deepest_km", "mapped_node_km",
+        "mapped_bulge_m", "mapped_bulge_km", "deepest_error_percent", "bulge_error_percent", "node_shift_km",
+        "bulge_shift_km", "strip_te_km", "te_error_percent", "verdict", "distortion_percent", "young_gpa", "poisson",
+        "gravity_m_s2", "rho_mantle", "rho_infill", "rho_load", "remarks",
+    ),
+    "CHECK_STATIONS": (
+        "transect", "distance_km", "dem_m", "strip_load_mpa", "mapped_load_mpa", "strip_deflection_m",
+        "mapped_deflection_m", "difference_m", "te_km",
+    ),
+    "ANOMALIES": (
+        "transect", "distance_km", "free_air_mgal", "bouguer_mgal", "load_mgal", "surface_mgal", "moho_mgal",
+        "observed_mgal", "sigma_mgal", "in_fit", "predicted_mgal", "residual_mgal",
+    ),
+    "EVIDENCE": (
+        "transect", "source", "te_km", "te_low_km", "te_high_km", "rho_load", "rho_load_low", "rho_load_high", "rms_m",
+        "rms_mgal", "remarks",
+    ),
+    "VERDICTS": (
+        "transect", "distance_km", "te_km", "curvature_per_m", "fibre_stress_mpa", "moment_n", "moment_limit_n",
+        "moment_share", "expected_te_km", "mechanical_km", "mechanical_fit_km", "age_myr", "heat_flow_mw_m2",
+        "age_fit_myr", "heat_flow_fit_mw_m2", "overstressed_share", "verdict", "young_gpa", "poisson", "remarks",
+    ),
+    "ENVELOPES": (
+        "transect", "depth_km", "temperature_c", "tension_mpa", "compression_mpa", "stress_mpa", "elastic_stress_mpa",
+    ),
+    "MOMENTS": ("transect", "curvature_per_m", "moment_n", "effective_te_km"),
+    "AGES": (
+        "transect", "te_km", "te_low_km", "te_high_km", "age_myr", "load_age_myr", "age_at_loading_myr",
+        "temperature_c", "temperature_low_c", "temperature_high_c", "remarks",
+    ),
+    "ISOTHERM_DEPTHS": ("transect", "age_at_loading_myr", "temperature_c", "depth_km"),
 }  # fmt: skip
 """Names of the fields of each output, in order."""
 
@@ -63,6 +99,11 @@ GEOMETRY = {
     "PROFILES": QgsWkbTypes.Type.LineStringZM,
     "STATIONS": QgsWkbTypes.Type.PointZ,
     "MARKERS": QgsWkbTypes.Type.PointZ,
+    "CHECKS": QgsWkbTypes.Type.LineStringZM,
+    "CHECK_STATIONS": QgsWkbTypes.Type.PointZ,
+    "ANOMALIES": QgsWkbTypes.Type.PointZ,
+    "VERDICTS": QgsWkbTypes.Type.PointZ,
+    "AGES": QgsWkbTypes.Type.LineStringZM,
 }
 """Geometry of each output that has one."""
 

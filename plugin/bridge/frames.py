@@ -24,7 +24,7 @@ _LONGITUDE_LATITUDE = {
 def pyproj_crs(crs: QgsCoordinateReferenceSystem, what: str) -> CRS:
     """A QGIS CRS as pyproj has it; ``what`` names its owner in the error."""
     try:
-        return CRS.from_wkt(crs.toWkt(QgsCoordinateReferenceSystem.WKT_PREFERRED))
+        return CRS.from_wkt(crs.toWkt(QgsCoordinateReferenceSystem.WktVariant.WKT_PREFERRED))
     except ProjError:
         raise DownwarpError(f"{what} has a CRS that cannot be read: {crs.userFriendlyIdentifier()}.") from None
 

@@ -24,6 +24,7 @@ from qgis.core import (
     QgsProcessingParameterField,
     QgsProcessingParameterNumber,
     QgsProcessingParameterRasterLayer,
+    QgsProcessingParameterString,
     QgsProperty,
 )
 from qgis.PyQt.QtCore import QCoreApplication
@@ -42,7 +43,7 @@ class Key:
 
     name: str
     kind: str
-    """number, whole, enum, flag, crs, raster, band, field, or a source: lines, points, polygons, table."""
+    """number, whole, text, enum, flag, crs, raster, band, field, or a source: lines, points, polygons, table."""
     label: str
     default: Any = None
     """None where the key may be left blank."""
@@ -66,6 +67,8 @@ class Key:
         if self.kind == "enum":
             options = [tr(option) for option in self.options]
             return QgsProcessingParameterEnum(self.name, label, options, False, self.default, optional)
+        if self.kind == "text":
+            return QgsProcessingParameterString(self.name, label, self.default, False, optional)
         if self.kind == "flag":
             return QgsProcessingParameterBoolean(self.name, label, self.default, optional)
         if self.kind == "crs":
@@ -155,6 +158,19 @@ LOAD = (
     Key("LOAD_TO", "number", "Load to, km", advanced=True),
 )  # fmt: skip
 LOAD_AREA = (Key("LOAD_AREA", "polygons", "Load area", advanced=True),)
+LOAD_SHAPE = (
+    Key(
+        "LOAD_SHAPE", "enum", "Shape of the load", 0,
+        ("Strip: as on the line, all along strike", "As mapped"), advanced=True,
+    ),
+)  # fmt: skip
+STRIP_WARNING = (Key("CHECK_STRIP", "flag", "Check the strip where the plate is continuous", False, advanced=True),)
+ZONES = (
+    Key("TE_ZONES", "whole", "Zones of elastic thickness: 1, or 2 for a plate that weakens towards its break", 1,
+        advanced=True),
+    Key("ZONE_CHANGE_FROM", "number", "Change of thickness sought from, km from the break", advanced=True),
+    Key("ZONE_CHANGE_TO", "number", "Change of thickness sought to, km from the break", advanced=True),
+)  # fmt: skip
 FORCES_AND_REGIONAL = (
     Key(
         "END_FORCES", "enum", "Forces at the break", 4,
@@ -178,6 +194,14 @@ BEND = (
     Key("TE_KM", "number", "Elastic thickness, km", 25.0),
     Key("PLATE", "enum", "Plate", 0, ("Continuous", "Broken")),
 )
+THICKNESS_ALONG = (
+    Key("TE_FIELD", "field", "Field with the elastic thickness, km (blank: TE_KM)", parent="TRANSECTS", advanced=True),
+    Key("TE_RASTER", "raster", "Raster of the elastic thickness, km", advanced=True),
+)
+STRIP_PLATE = (
+    BEND[0],
+    Key("TE_FIELD", "field", "Field with the plate's elastic thickness, km (blank: TE_KM)", parent="TRANSECTS"),
+)
 BEND_BREAK = (
     Key(
         "BREAK_AT", "enum", "Place of the break", 0, ("Line start", "Lowest DEM station", "At BREAK_KM"),
@@ -193,6 +217,12 @@ CONSTANTS = (
     Key("POISSON", "number", "Poisson's ratio", 0.25, advanced=True),
     Key("GRAVITY", "number", "Acceleration of gravity, m/s2", 9.81, advanced=True),
     Key("IN_PLANE", "number", "In-plane force, N/m (compression positive)", 0.0, advanced=True),
+)
+# A plan view takes one infill and no in-plane force.
+UNIFORM = tuple(
+    key
+    for key in DENSITIES + CONSTANTS
+    if key.name not in ("RHO_UNDER_LOAD", "FILL_SINKING_ONLY", "FILL_LEVEL", "IN_PLANE")
 )
 STATION_FIELDS = (
     Key("INPUT", "table", "Stations: points, or a table with distances", required=True),
@@ -315,6 +345,13 @@ class Values:
             return False
         raise DownwarpError(f"{name} is {value!r}; it takes true or false.")
 
+    def field(self, name: str) -> str | None:
+        """The name of a field; None where blank."""
+        value = self.raw(name)
+        if value is not None and not isinstance(value, str):
+            raise DownwarpError(f"{name} is {value!r}; it takes the name of a field.")
+        return value
+
     def check(self, known: Iterable[str]) -> None:
         """Read every plain value once, and refuse keys that the algorithm (``known``) does not have."""
         known = set(known)
@@ -323,7 +360,13 @@ class Values:
                 near = difflib.get_close_matches(name, known, n=1)
                 hint = f"; did you mean {near[0]}?" if near else "."
                 raise DownwarpError(f"{name} is not a key of this algorithm{hint}")
-        readers = {"number": self.number, "whole": self.number, "enum": self.enum, "flag": self.flag}
+        readers = {
+            "number": self.number,
+            "whole": self.number,
+            "enum": self.enum,
+            "flag": self.flag,
+            "field": self.field,
+        }
         for key in self.keys.values():
             if key.kind in readers:
                 readers[key.kind](key.name)

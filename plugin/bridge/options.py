@@ -2,10 +2,14 @@
 
 from __future__ import annotations
 
+from qgis.core import QgsFeature, QgsFeatureSource
+
 from ..core.elastic import Elastic
 from ..core.errors import DownwarpError
-from ..core.settings import BOTH, FORCES_NONE, FitOptions
+from ..core.settings import BOTH, FORCES_NONE, MAPPED, STRIP, FitOptions
 from .keys import Values
+from .picks import number_of
+from .sampling import LEAST_THICKNESS, MOST_THICKNESS
 
 KM = 1e3
 
@@ -40,6 +44,7 @@ def _load_and_densities(values: Values) -> dict:
 
 def fit_options(values: Values) -> FitOptions:
     """What a fit was asked for; raises DownwarpError where values contradict each other."""
+    located = "LOAD_SHAPE" in values.keys  # stations of a table have no relief about them
     return FitOptions(
         **_load_and_densities(values),
         plate=values.enum("PLATE"),
@@ -54,22 +59,59 @@ def fit_options(values: Values) -> FitOptions:
         sigma=values.number("SIGMA_M"),
         robust=values.flag("ROBUST"),
         confidence=values.required_number("CONFIDENCE") / 100.0,
+        load_shape=values.enum("LOAD_SHAPE") if located else STRIP,
+        check_strip=located and values.flag("CHECK_STRIP"),
+        zones=values.whole("TE_ZONES"),
+        zone_from=values.scaled("ZONE_CHANGE_FROM", KM),
+        zone_to=values.scaled("ZONE_CHANGE_TO", KM),
     )
 
 
-def bend_options(values: Values) -> FitOptions:
-    """What bending a stated plate was asked for: the options of a fit without its search."""
+def bend_options(values: Values, thickness: float | None = None) -> FitOptions:
+    """What bending a stated plate was asked for: the options of a fit without its search.
+
+    ``thickness``: m, where it is not that of TE_KM.
+    """
     plate = values.enum("PLATE")
     if plate >= BOTH:
         raise DownwarpError(f"PLATE is {plate}; it takes 0 (continuous) or 1 (broken).")
-    thickness = values.required_number("TE_KM") * KM
-    if not 0.1 * KM <= thickness <= 1000 * KM:
-        raise DownwarpError(f"TE_KM is {thickness / KM:g}; it takes a number from 0.1 to 1000.")
+    if thickness is None:
+        thickness = stated_thickness(values)
+    if values.given("TE_FIELD") and values.given("TE_RASTER"):
+        raise DownwarpError("TE_FIELD and TE_RASTER are both given; a plate takes one of them.")
+    load_shape = values.enum("LOAD_SHAPE")
+    if load_shape == MAPPED and values.given("TE_RASTER"):
+        raise DownwarpError("LOAD_SHAPE is 1 (as mapped), which takes one elastic thickness: leave TE_RASTER out.")
     return FitOptions(
         **_load_and_densities(values),
         plate=plate,
-        te_from=0.5 * thickness if thickness > 0.2 * KM else 0.1 * KM,
-        te_to=2 * thickness,
+        te_from=max(0.9 * thickness, LEAST_THICKNESS),
+        te_to=min(1.1 * thickness, MOST_THICKNESS),
         end_forces=FORCES_NONE,
         regional=0,
+        load_shape=load_shape,
     )
+
+
+def stated_thickness(values: Values, feature: QgsFeature | None = None, name: str = "") -> float:
+    """Elastic thickness, m, from TE_FIELD of a feature where that key is given, else TE_KM."""
+    field = values.raw("TE_FIELD")
+    if field is None or feature is None:
+        thickness, what = values.required_number("TE_KM"), "TE_KM"
+    else:
+        what = f"Transect {name}: TE_FIELD {field}"
+        thickness = number_of(feature[field], what)
+        if thickness != thickness:
+            raise DownwarpError(f"{what} is NULL: there is no plate.")
+    if not LEAST_THICKNESS <= thickness * KM <= MOST_THICKNESS:
+        raise DownwarpError(
+            f"{what} is {thickness:g}; it takes a number from {LEAST_THICKNESS / KM:g} to {MOST_THICKNESS / KM:g}."
+        )
+    return thickness * KM
+
+
+def check_thickness_field(values: Values, source: QgsFeatureSource) -> None:
+    """Raise DownwarpError where TE_FIELD is no field of the transects."""
+    field = values.raw("TE_FIELD")
+    if field is not None and source.fields().lookupField(field) < 0:
+        raise DownwarpError(f"TE_FIELD: TRANSECTS has no field {field!r}.")

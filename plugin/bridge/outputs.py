@@ -20,8 +20,10 @@ from qgis.core import (
 )
 
 from ..core.result import Bent, FitResult
-from . import rows
-from .fields import GEOMETRY, attributes, layer_fields
+from ..core.strip_check import StripCheck
+from . import rows, strip_rows
+from .destinations import Destinations
+from .fields import FIELDS, GEOMETRY, attributes, layer_fields
 from .keys import tr
 from .styles import style_on_load
 
@@ -51,6 +53,11 @@ class Track:
         return np.interp(distance, self.distance, self.x), np.interp(distance, self.distance, self.y)
 
 
+def place(x: float, y: float, z: float) -> QgsGeometry:
+    """A point with Z, also where that is not known (NaN): a point without Z would be stored at sea level."""
+    return QgsGeometry(QgsPoint(x, y, z, wkbType=QgsWkbTypes.Type.PointZ))
+
+
 def add_sinks(algorithm, names: tuple[str, ...], required: tuple[str, ...]) -> None:
     """Add the sinks of the named outputs to an algorithm; those not required are optional."""
     types = {
@@ -58,6 +65,11 @@ def add_sinks(algorithm, names: tuple[str, ...], required: tuple[str, ...]) -> N
         "PROFILES": QgsProcessing.SourceType.TypeVectorLine,
         "STATIONS": QgsProcessing.SourceType.TypeVectorPoint,
         "MARKERS": QgsProcessing.SourceType.TypeVectorPoint,
+        "CHECKS": QgsProcessing.SourceType.TypeVectorLine,
+        "CHECK_STATIONS": QgsProcessing.SourceType.TypeVectorPoint,
+        "ANOMALIES": QgsProcessing.SourceType.TypeVectorPoint,
+        "VERDICTS": QgsProcessing.SourceType.TypeVectorPoint,
+        "AGES": QgsProcessing.SourceType.TypeVectorLine,
     }
     for name in names:
         kind = types.get(name, QgsProcessing.SourceType.TypeVector)
@@ -65,37 +77,42 @@ def add_sinks(algorithm, names: tuple[str, ...], required: tuple[str, ...]) -> N
         create_by_default = name in types
         algorithm.addParameter(
             QgsProcessingParameterFeatureSink(
-                name, tr(LABELS.get(name, name.capitalize())), kind, None, optional, create_by_default
+                name, tr(LABELS.get(name, name.replace("_", " ").capitalize())), kind, None, optional, create_by_default
             )
         )
 
 
 class Outputs:
-    """The sinks of one run."""
+    """The sinks of one run; `discard` them in the end, whatever came of it."""
 
     def __init__(
         self, algorithm, parameters: dict[str, Any], context, crs: QgsCoordinateReferenceSystem, located: bool = True
     ) -> None:
-        """``located``: whether the input has geometry; without it the outputs have none."""
+        """``located``: whether the input has geometry; without it the outputs have none.
+
+        Raises DownwarpError where a file that is asked for cannot be made, so that nobody waits in vain.
+        """
         self._algorithm, self._parameters, self._context = algorithm, parameters, context
         self._crs, self._located = crs, located
+        self._destinations = Destinations(algorithm, parameters, context)
         self._sinks: dict[str, tuple[QgsFeatureSink | None, Any]] = {}
+        self._left_out: dict[str, int] = {}
         self.results: dict[str, Any] = {}
+        for name in FIELDS:
+            definition = algorithm.parameterDefinition(name)
+            if definition is not None and definition.isDestination():  # TRANSECTS is an input of most
+                self._destinations.check(name, self._kind(name) != QgsWkbTypes.Type.NoGeometry)
+
+    def _kind(self, name: str) -> QgsWkbTypes.Type:
+        return GEOMETRY.get(name, QgsWkbTypes.Type.NoGeometry) if self._located else QgsWkbTypes.Type.NoGeometry
 
     def _sink(self, name: str) -> tuple[QgsFeatureSink | None, Any]:
         if name not in self._sinks:
-            fields = layer_fields(name)
-            kind = GEOMETRY.get(name) if self._located else None
+            fields, kind = layer_fields(name), self._kind(name)
             sink, destination = None, ""
             if self._algorithm.parameterDefinition(name) is not None:
-                sink, destination = self._algorithm.parameterAsSink(
-                    self._parameters,
-                    name,
-                    self._context,
-                    fields,
-                    QgsWkbTypes.Type.NoGeometry if kind is None else kind,
-                    QgsCoordinateReferenceSystem() if kind is None else self._crs,
-                )
+                crs = QgsCoordinateReferenceSystem() if kind == QgsWkbTypes.Type.NoGeometry else self._crs
+                sink, destination = self._destinations.sink(name, fields, kind, crs)
             if sink is not None:
                 self.results[name] = destination
                 style_on_load(self._context, destination, name)
@@ -114,6 +131,9 @@ class Outputs:
         sink, fields = self._sink(name)
         if sink is None:
             return
+        if geometry is None and not self._destinations.holds_bare_rows(name):
+            self._left_out[name] = self._left_out.get(name, 0) + 1
+            return
         feature = QgsFeature(fields)
         feature.setAttributes(attributes(row, fields))
         if geometry is not None and self._located:
@@ -128,11 +148,11 @@ class Outputs:
         for index, station in enumerate(rows.station_rows(bent, thickness_known)):
             self.add("STATIONS", station, points[index] if points else None)
         for marker in rows.marker_rows(bent):
-            place = None
+            point = None
             if track is not None:
                 x, y = track.at(marker["distance_km"] * 1e3)
-                place = QgsGeometry(QgsPoint(float(x), float(y), marker["elevation_m"]))
-            self.add("MARKERS", marker, place)
+                point = place(float(x), float(y), marker["elevation_m"])
+            self.add("MARKERS", marker, point)
 
     def fitted(self, result: FitResult, track: Track | None) -> None:
         """Write everything about a fitted transect."""
@@ -145,9 +165,17 @@ class Outputs:
         for row in rows.choice_rows(result):
             self.add("CHOICES", row)
 
-    def failed(self, name: str, why: str) -> None:
-        """Write a transect that could not be fitted: its name and the reason."""
-        self.add("PROFILES", {"transect": name, "remarks": why})
+    def checked(self, check: StripCheck, track: Track | None) -> None:
+        """Write CHECKS and CHECK_STATIONS of a strip beside the load as mapped."""
+        surface = check.strip.regional[0] - check.deflection
+        self.add("CHECKS", strip_rows.check_row(check), self._line(track, surface))
+        points = self._points(track, surface)
+        for index, station in enumerate(strip_rows.station_rows(check)):
+            self.add("CHECK_STATIONS", station, points[index] if points else None)
+
+    def failed(self, sink: str, name: str, why: str) -> None:
+        """Write a transect that could not be worked on: its name and the reason."""
+        self.add(sink, {"transect": name, "remarks": why})
 
     def _line(self, track: Track | None, z: np.ndarray) -> QgsGeometry | None:
         """The line over the stations that carry the plate, with Z the predicted surface and M the distance in km."""
@@ -162,10 +190,22 @@ class Outputs:
     def _points(self, track: Track | None, z: np.ndarray) -> list[QgsGeometry]:
         if track is None:
             return []
-        return [QgsGeometry(QgsPoint(x, y, h)) for x, y, h in zip(track.x.tolist(), track.y.tolist(), z.tolist())]
+        return [place(x, y, h) for x, y, h in zip(track.x.tolist(), track.y.tolist(), z.tolist())]
 
-    def flush(self) -> None:
-        """Let the sinks write what they hold."""
+    def flush(self) -> list[str]:
+        """Let the sinks write what they hold and put files into their places; what the user should know of it."""
         for sink, _ in self._sinks.values():
             if sink is not None:
                 sink.flushBuffer()
+        # A file is closed once nobody holds its sink.
+        sink = None
+        self._sinks.clear()
+        words = tr("{name} is a FlatGeobuf, which holds no rows without geometry: {count} left out")
+        left_out = [words.format(name=name, count=count) for name, count in self._left_out.items()]
+        self._destinations.place()
+        return left_out
+
+    def discard(self) -> None:
+        """Leave nothing behind that was not finished."""
+        self._sinks.clear()
+        self._destinations.discard()

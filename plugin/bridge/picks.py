@@ -37,6 +37,8 @@ class PickReader:
         if not rows:
             raise DownwarpError("PICKS holds no point.")
         x, y, self._elevation, self._sigma = np.array(rows).T
+        if (self._sigma < 0).any():
+            raise DownwarpError(f"PICK_SIGMA field {sigma} holds a number below 0; a standard deviation is above it.")
         own = Frame.of(source.sourceCrs(), "PICKS")
         self._longitude, self._latitude = transformer(own.crs, frame.geographic, "PICKS").transform(x, y)
         self._reach = reach

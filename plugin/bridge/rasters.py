@@ -15,6 +15,9 @@ from .frames import Frame, full_turn, pyproj_crs, transformed, transformer
 UNITS = (1.0, 0.3048, 1200.0 / 3937.0, 1000.0)
 """Metres in a metre, a foot, a US survey foot and a kilometre: the factors of RELIEF_UNIT."""
 
+KILOMETRES = 3
+"""Place of the kilometre among them."""
+
 _TILE = 256
 """Side, in cells, of the squares in which cells are read: no window is larger."""
 

@@ -9,7 +9,7 @@ import numpy as np
 
 from ..core.elastic import flexural_parameter
 from ..core.profile import Profile
-from ..core.result import Bent, Fit, FitResult
+from ..core.result import Bent, Estimate, Fit, FitResult
 from ..core.settings import PLATE_NAMES, SETTINGS
 
 Row = dict[str, Any]
@@ -68,6 +68,11 @@ def profile_row(result: FitResult) -> Row:
         stations_effective=best.effective,
         remarks="; ".join(result.remarks),
     )
+    near, change = (Estimate(None),) * 2 if best.zones is None else (best.zones.near, best.zones.change)
+    for name, estimate in (("te_near", near), ("zone_change", change)):
+        row[f"{name}_km"] = _km(estimate.value)
+        row[f"{name}_low_km"] = _km(estimate.low)
+        row[f"{name}_high_km"] = _km(estimate.high)
     if best.thickness.value is None:
         row.update(rigidity_nm=None, flexural_parameter_km=None)
     return row

@@ -1,7 +1,8 @@
 """Works through the transects of one run: one that fails is reported and does not stop the rest.
 
 Finished transects wait in a temporary file until all are done, and only then are the sinks made: memory does not grow
-with their number, and a run that is cancelled or fails leaves no layer behind.
+with their number, and a run that is cancelled or fails leaves no layer behind, and files of an earlier run as they
+were.
 """
 
 from __future__ import annotations
@@ -35,6 +36,8 @@ LOOK_EVERY = 0.2
 """Time, s, between looks at whether the run was cancelled."""
 TELL_EVERY = 5.0
 """Time, s, between words on how long it will take."""
+ROW_PER_TRANSECT = frozenset({"PROFILES", "CHECKS", "EVIDENCE", "VERDICTS", "AGES"})
+"""Outputs that have a row for every transect, also for one that failed."""
 
 
 @dataclass(frozen=True)
@@ -96,7 +99,8 @@ def run_each(
 ) -> Finished:
     """Sample each of ``count`` items and ``work`` on it, here or in a pool, then ``write`` all into the sinks.
 
-    Failed transects are rows of PROFILES, where that is among the sinks ``names``, with the reason in their remarks.
+    Failed transects are rows of PROFILES or CHECKS, whichever is among the sinks ``names``, with the reason in their
+    remarks.
     Raises DownwarpError where all fail, and Cancelled.
     """
     finished = Finished()
@@ -155,15 +159,20 @@ def _patient(future: Future, feedback) -> Any:
 def _write_all(finished: Finished, outputs: Outputs, names: tuple[str, ...], feedback, write) -> None:
     progress = progress_of(feedback, 1.0 - WRITING_SHARE, 1.0)
     progress(0.0)
-    outputs.open(names)
     total = finished.count + len(finished.failures)
-    for done, (track, result, name, why) in enumerate(finished.entries(), 1):
-        if not why:
-            write(outputs, result, track)
-        elif "PROFILES" in names:
-            outputs.failed(name, why)
-        progress(done / total)
-    outputs.flush()
+    try:
+        outputs.open(names)
+        for done, (track, result, name, why) in enumerate(finished.entries(), 1):
+            if not why:
+                write(outputs, result, track)
+            else:
+                for sink in ROW_PER_TRANSECT.intersection(names):
+                    outputs.failed(sink, name, why)
+            progress(done / total)
+        for words in outputs.flush():
+            feedback.pushWarning(words)
+    finally:
+        outputs.discard()
 
 
 class _Clock:

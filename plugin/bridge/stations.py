@@ -79,6 +79,8 @@ def _sampled(
             f"Transect {name} has two stations at distance {repeated[0]:g} km (DISTANCE); it takes one each, and "
             "TRANSECT_FIELD where INPUT holds several transects."
         )
+    if (columns.get("SIGMA_FIELD", np.zeros(1)) < 0).any():
+        raise DownwarpError(f"Transect {name}: SIGMA_FIELD holds a number below 0; a standard deviation is above it.")
     relief, observed = columns.get("LOAD_FIELD"), columns.get("OBSERVED_FIELD")
     if relief is None:
         relief, observed = observed, None

@@ -179,5 +179,7 @@ def strength_numbers(checks) -> dict[str, float | None]:
         (check.verdict.moment_share, check.verdict.mechanical / KM, check.verdict.expected_thickness / KM)
         for check in checks
     ]
-    medians = np.median(np.array(found), axis=0).tolist() if found else [None] * len(NUMBERS)
-    return {**dict(zip(NUMBERS, medians)), "TRANSECTS_DONE": len(found)}
+    medians = np.median(np.array(found), axis=0) if found else np.full(len(NUMBERS), np.nan)
+    # A strength of nothing carries no share of a moment.
+    numbers = [value if np.isfinite(value) else None for value in medians.tolist()]
+    return {**dict(zip(NUMBERS, numbers)), "TRANSECTS_DONE": len(found)}

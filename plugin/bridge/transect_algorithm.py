@@ -10,6 +10,7 @@ from qgis.core import QgsFeature
 
 from ..core.errors import DownwarpError
 from ..core.profile import Profile
+from ..core.settings import FitOptions
 from . import lines
 from .algorithm import DownwarpAlgorithm
 from .areas import Areas
@@ -17,7 +18,7 @@ from .frames import Frame
 from .keys import Values, required_source
 from .outputs import Outputs, Track
 from .picks import PickReader
-from .rasters import RasterReader
+from .rasters import KILOMETRES, RasterReader
 from .runs import Item, Progress, run_each
 from .sampling import Sampler
 
@@ -34,6 +35,7 @@ class TransectAlgorithm(DownwarpAlgorithm):
             raise DownwarpError(f"NAME_FIELD: TRANSECTS has no field {self._name_field!r}.")
         frame = Frame.of(self._source.sourceCrs(), "TRANSECTS")
         self._frame = frame
+        with_thickness = "TE_RASTER" in values.keys and values.given("TE_RASTER")
         self._sampler = Sampler(
             dem=self._raster(values, parameters, "DEM", frame, context),
             observed=self._raster(values, parameters, "OBSERVED", frame, context) if values.given("OBSERVED") else None,
@@ -44,6 +46,7 @@ class TransectAlgorithm(DownwarpAlgorithm):
             width=values.required_number("SWATH_KM") * KM,
             strips=values.whole("SWATH_LINES"),
             align=bool(values.enum("SWATH_ALIGN")),
+            thickness=self._raster(values, parameters, "TE_RASTER", frame, context) if with_thickness else None,
         )
 
     def check(self, values: Values) -> None:
@@ -69,7 +72,7 @@ class TransectAlgorithm(DownwarpAlgorithm):
             frame,
             name,
             self.parameterAsCrs(parameters, "DEM_CRS", context) if override else None,
-            values.enum("RELIEF_UNIT"),
+            KILOMETRES if name == "TE_RASTER" else values.enum("RELIEF_UNIT"),
         )
 
     def _areas(self, values: Values, parameters, name: str, frame: Frame, context) -> Areas | None:
@@ -104,9 +107,13 @@ class TransectAlgorithm(DownwarpAlgorithm):
         """One feature of TRANSECTS, to be sampled."""
         return Item(self._name(feature), partial(self._sample, feature))
 
+    def options_for(self, feature: QgsFeature) -> FitOptions | None:
+        """What a feature's profile is for; None where only the line itself is wanted."""
+        return None
+
     def _sample(self, feature: QgsFeature, progress: Progress) -> tuple[Track, Profile]:
         transect = lines.transect(feature, self._frame, self._name(feature))
-        stations, profile = self._sampler.sample(transect, progress)
+        stations, profile = self._sampler.sample(transect, progress, self.options_for(feature))
         x, y = self._frame.from_degrees(stations.longitude, stations.latitude)
         return Track(stations.distance, x, y), profile
 

@@ -13,6 +13,7 @@ import shutil
 import subprocess
 import sys
 from concurrent.futures import Future, ThreadPoolExecutor
+from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
@@ -58,7 +59,9 @@ class FitPool:
             process.wait()
             for stream in (process.stdin, process.stdout):
                 if stream is not None:
-                    stream.close()
+                    # A job that the worker will not read any more breaks the pipe as it is flushed.
+                    with suppress(OSError):
+                        stream.close()
 
     def submit(self, profile: Profile) -> Future:
         """Start a fit; the future yields its FitResult or raises DownwarpError."""

@@ -9,12 +9,14 @@ import numpy as np
 from . import check
 from .errors import DownwarpError
 from .forward import TransectModel
+from .mapped import forward_model
 from .markers import find_markers
 from .plate import CONTINUES
 from .problem import Problem, prepare
 from .profile import Profile
 from .result import Bent, StationValues
-from .settings import BROKEN, CONTINUOUS, FitOptions
+from .settings import BROKEN, CONTINUOUS, MAPPED, FitOptions
+from .zones import varying
 
 
 def bend_profile(
@@ -30,7 +32,8 @@ def bend_profile(
     """Bend a plate of stated thickness, m, under the load of a sampled profile.
 
     ``end_shear`` (N/m, positive down) and ``end_moment`` (N, positive where it turns the broken end down) act at the
-    break; ``start`` and ``finish`` are supports of `plate`. The undeflected surface is the reference level. Raises
+    break; ``start`` and ``finish`` are supports of `plate`. The undeflected surface is the reference level. Where the
+    profile holds a thickness along the line, the plate has that one, and the answer its mean along the plate. Raises
     DownwarpError where the plate or its load cannot be made.
     """
     for key, value in (("END_SHEAR", end_shear), ("END_MOMENT", end_moment)):
@@ -41,15 +44,61 @@ def bend_profile(
         raise DownwarpError("START_SUPPORT is 0 (continues), but PLATE is 1: a broken plate begins at its break.")
     if kind == CONTINUOUS and end_moment:
         raise DownwarpError("END_MOMENT acts on a broken plate only, but PLATE is 0 (continuous).")
+    model, remarks = forward_model(problem, kind)
+    break_position = float(problem.breaks[0])
+    regional = (problem.reference_level or 0.0,)
+    if options.load_shape == MAPPED:
+        for key, given in (("END_SHEAR", end_shear), ("START_SUPPORT", start), ("FINISH_SUPPORT", finish)):
+            if given:
+                raise DownwarpError(
+                    f"{key} is {given:g}, but LOAD_SHAPE is 1 (as mapped), which takes a plate that continues at both "
+                    "ends, without end forces."
+                )
+        thickness = _uniform(profile, thickness)
+        return _told(bend_problem(problem, model, thickness, break_position, {}, regional), remarks)
     model = replace(
-        problem.model(kind),
+        model,
         shear=kind == BROKEN or bool(end_shear),
         moment=kind == BROKEN,
         start=start,
         finish=finish,
     )
     forces = {"end_shear": end_shear, "end_moment": end_moment}
-    return bend_problem(problem, model, thickness, float(problem.breaks[0]), forces, (problem.reference_level or 0.0,))
+    if profile.thickness is None:
+        return bend_problem(problem, model, thickness, break_position, forces, regional)
+    first = break_position if kind == BROKEN else -np.inf
+    along, on_plate = profile.thickness, profile.distance >= first - 1e-6
+    missing = int((~np.isfinite(along[on_plate])).sum())
+    if missing:
+        raise DownwarpError(
+            f"{profile.name}: the elastic thickness is not known at {missing} of the {int(on_plate.sum())} stations on "
+            "the plate."
+        )
+    # What lies before the break carries no plate.
+    along = np.interp(profile.distance, profile.distance[on_plate], along[on_plate])
+    bent = bend_problem(problem, varying(model, along), 1.0, break_position, forces, regional)
+    least, most, mean = (float(of(along[on_plate])) for of in (np.min, np.max, np.mean))
+    if most > least:
+        remarks += (
+            f"the elastic thickness runs from {least / 1e3:.3g} to {most / 1e3:.3g} km along the plate; the profile's "
+            "thickness, rigidity and flexural parameter are those of its mean",
+        )
+    return replace(_told(bent, remarks), thickness=mean)
+
+
+def _told(bent: Bent, remarks: tuple[str, ...]) -> Bent:
+    return replace(bent, remarks=remarks + bent.remarks)
+
+
+def _uniform(profile: Profile, thickness: float) -> float:
+    """The one thickness, m, of a plate in plan view."""
+    if profile.thickness is None:
+        return thickness
+    if not np.ptp(profile.thickness) == 0:
+        raise DownwarpError(
+            f"{profile.name}: LOAD_SHAPE is 1 (as mapped), which takes one elastic thickness all along the line."
+        )
+    return float(profile.thickness[0])
 
 
 def bend_problem(
@@ -82,9 +131,9 @@ def bend_problem(
 
     at = distance[on_plate]
     deflection = bending.at(at)[:, 0]
-    rigidity = float(elastic.rigidity(thickness))
+    along = model.thickness_at(thickness, break_position, at)
     moment, shear = (values[:, 0] for values in bending.moment_and_shear_at(at))
-    curvature = -moment / rigidity
+    curvature = -moment / elastic.rigidity(along)
     level, tilt, bow = (*regional, 0.0, 0.0, 0.0)[:3]
     surface = level + tilt * at + bow * at**2 - deflection
     observed = profile.relief if problem.bare else profile.observed
@@ -99,8 +148,8 @@ def bend_problem(
         moment=spread(moment),
         shear=spread(shear),
         curvature=spread(curvature),
-        fibre_stress=spread(elastic.young * thickness * curvature / (2 * (1 - elastic.poisson**2))),
-        thickness=spread(np.full(at.shape, thickness)),
+        fibre_stress=spread(elastic.young * along * curvature / (2 * (1 - elastic.poisson**2))),
+        thickness=spread(along),
         infill=spread(problem.infill_density(model)[on_plate]),
         observed=nowhere if observed is None else observed,
         sigma=nowhere if profile.sigma is None else profile.sigma,
@@ -108,7 +157,8 @@ def bend_problem(
     )
     has_break = model.kind == BROKEN or bool(model.end_forces)
     return Bent(
-        problem,
+        # The relief about the line is large, and whoever keeps the answer has no use for it.
+        problem if profile.plan is None else replace(problem, profile=replace(profile, plan=None)),
         model.kind,
         thickness,
         break_position if has_break else None,

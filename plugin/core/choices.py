@@ -15,6 +15,7 @@ from .settings import (
     BREAK_GIVEN,
     BROKEN,
     CONTINUOUS,
+    MAPPED,
     PLATE_NAMES,
     REGIONAL_BOW,
     REGIONAL_LEVEL,
@@ -33,7 +34,8 @@ REGIONAL_WORDS = ("none", "level", "level and tilt", "level, tilt and bow")
 def try_choices(
     problem: Problem, best: Fit, fit_kind: Callable[[Problem, int], Fit], progress: Callable[[float], None]
 ) -> tuple[ChoiceRow, ...]:
-    """One row per alternative; the break is held where the answer has it, so that choices differ in one thing only.
+    """One row per alternative; break and change of thickness are held where the answer has them, so that choices differ
+    in one thing only.
 
     ``fit_kind`` fits one kind of plate to a problem. An alternative that cannot be fitted has a row without values.
     """
@@ -70,6 +72,8 @@ def _held(problem: Problem, best: Fit) -> FitOptions:
     options = replace(problem.options, reference_level=problem.reference_level)
     if best.break_position.value is not None:
         options = replace(options, break_at=BREAK_GIVEN, break_position=best.break_position.value)
+    if best.zones is not None and best.zones.change.value is not None:
+        options = replace(options, zone_from=best.zones.change.value, zone_to=best.zones.change.value)
     return options
 
 
@@ -99,6 +103,8 @@ def _alternatives(problem: Problem, best: Fit) -> Iterator[tuple[str, str, dict]
             density = rho.load + sign * DENSITY_CHANGE
             if density > 0:
                 yield f"{word} load", f"{density:.0f} kg/m3", {"rho_load": density}
+    if options.load_shape == MAPPED or options.zones > 1:
+        return  # there is only one kind of plate that has them
     other = CONTINUOUS if best.kind == BROKEN else BROKEN
     yield "other plate", PLATE_NAMES[other], {"plate": other}
 

@@ -45,6 +45,8 @@ REGIONAL_NAMES = ("level", "tilt", "bow")
 ZONE_CHANGES = (10e3, 150e3)
 """Distances from the break, m, between which a change of thickness is sought where the user gives none: published ones
 lie 20 to 95 km from a trench's axis (Zhang, Lin & Zhou, abstract alone)."""
+MOST_ZONE_STATIONS = 750
+"""Stations beyond which trials of two zones would take more than some 1.5 GB of memory."""
 ZONE_PART = 0.5
 """Part of the fitted plate within which it is sought then, at most."""
 
@@ -92,7 +94,7 @@ def _bend_left_to_noise(fit: Fit) -> tuple[str, ...]:
     problem = fit.bent.problem
     stiffness = (problem.densities.mantle - problem.densities.infill) * problem.options.elastic.gravity
     alpha = float(flexural_parameter(problem.options.elastic.rigidity(fit.bent.thickness), stiffness))
-    if bulge is None or length * 1e3 < alpha or fit.rms < 0.5 * abs(bulge.deflection):
+    if fit.thickness.value is None or bulge is None or length * 1e3 < alpha or fit.rms < 0.5 * abs(bulge.deflection):
         return ()
     return (
         f"the fit leaves residuals of {fit.rms:.0f} m, as long as the plate's own bend, beside a bulge of "
@@ -118,10 +120,12 @@ def _fit_kinds(problem: Problem, tell: Progress) -> tuple[list[Fit], Comparison 
 def _strip_checked(problem: Problem, fit: Fit) -> tuple[str, ...]:
     """What a fit with a strip must say of it, where it was asked to and the relief about the line is known."""
     options, plan, thickness = problem.options, problem.profile.plan, fit.thickness
-    if not options.check_strip or options.load_shape == MAPPED or plan is None or thickness.value is None:
+    if not options.check_strip or options.load_shape == MAPPED or plan is None:
         return ()
     if fit.kind != CONTINUOUS:
         return ("the strip was not checked: the plate is broken",)
+    if thickness.value is None:
+        return ("the strip was not checked: no thickness is resolved",)
     try:
         options = replace(options, reference_level=problem.reference_level)
         checked = check_strip(problem.profile, plan, options, thickness.value)
@@ -226,6 +230,12 @@ def _fit_zones(
     ``one``: what one zone comes to; ``infer`` and ``evaluate``: the posterior of trials on the line, and the trials.
     """
     low, high = zone_range(problem, seen)
+    count = problem.profile.distance.size
+    if count > MOST_ZONE_STATIONS:
+        raise DownwarpError(
+            f"TE_ZONES is 2, which takes at most {MOST_ZONE_STATIONS} stations, but the line has {count}: give a larger "
+            "distance between them (STEP_KM)."
+        )
     rounds = 0
 
     def run(search: ZoneSearch) -> Posterior:
@@ -234,8 +244,13 @@ def _fit_zones(
         rounds += 1
         part = functools.partial(_share, tell, 1.0 - 0.5 ** (rounds - 1), 0.5**rounds)
 
+        @functools.lru_cache(maxsize=search.places.size)
+        def at_pair(pair: int, thicknesses: bytes) -> tuple[np.ndarray, np.ndarray]:
+            return evaluate(search.model(model, pair), np.frombuffer(thicknesses))
+
         def trials(thicknesses: np.ndarray, place: float | None) -> tuple[np.ndarray, np.ndarray]:
-            return evaluate(search.model(model, place or 0.0), thicknesses)
+            # Places between two pairs stand for the nearer one, and the same trials are asked for more than once.
+            return at_pair(int(np.floor((place or 0.0) + 0.5)), thicknesses.tobytes())
 
         return infer(trials, search.places, part)
 
@@ -475,6 +490,7 @@ def parameters_in_use(problem: Problem, fit: Fit) -> tuple[Parameter, ...]:
     ]
     for key, given, scale, unit in (
         ("FILL_LEVEL", options.fill_level, 1.0, "m"),
+        ("BREAK_KM", options.break_position, km, "km"),
         ("BREAK_FROM", options.break_from, km, "km"),
         ("BREAK_TO", options.break_to, km, "km"),
         ("LOAD_FROM", options.load_from, km, "km"),

@@ -21,6 +21,8 @@ from .settings import BROKEN, RHO_AIR
 
 ELEMENTS_PER_ALPHA = 10
 """Elements in a flexural parameter: deflection is then right to some 1e-6 of its largest value."""
+MOST_ELEMENTS = 200_000
+"""Elements of a plate: round the Earth at a flexural parameter of a few kilometres."""
 FILL_ROUNDS = 30
 """Rounds after which infill that follows the deflection is given up as not converging."""
 
@@ -74,11 +76,28 @@ class TransectModel:
         """Stations at which the stiffness jumps, m."""
         return self.distance[1:-1][np.diff(self.stiffness) != 0]
 
+    def thickness_at(self, thickness: float, break_position: float, positions: np.ndarray) -> np.ndarray:
+        """Elastic thickness, m, at positions, m: a plate of one thickness has it everywhere."""
+        return np.full(np.shape(positions), thickness)
+
+    def rigidity(self, thickness: float, break_position: float, nodes: np.ndarray) -> np.ndarray:
+        """Flexural rigidity, N m, of a plate on ``nodes``, shaped as `Plate` takes it."""
+        return self.elastic.rigidity(thickness)
+
+    def thinnest(self, thickness: float, break_position: float, places: np.ndarray) -> np.ndarray:
+        """Least elastic thickness, m, between each of ``places`` (jumps among them) and the next, for elements follow
+        it."""
+        return self.thickness_at(thickness, break_position, 0.5 * (places[1:] + places[:-1]))
+
+    def thickness_jumps(self, break_position: float) -> np.ndarray:
+        """Places, m, at which the thickness jumps: none."""
+        return np.zeros(0)
+
     def nodes(self, thickness: float, break_position: float) -> np.ndarray:
         """Nodes of the plate, m: from its break on a broken plate, else all along the line.
 
         Their distance follows the flexural parameter, whatever the stations: shorter elements gain nothing and cost
-        digits. Among them are the break, where forces act there, and the places where the stiffness jumps.
+        digits. Among them are the break, where forces act there, and the places where stiffness or thickness jump.
         """
         begin = break_position if self.kind == BROKEN else float(self.distance[0])
         end = float(self.distance[-1])
@@ -86,13 +105,21 @@ class TransectModel:
             raise DownwarpError(
                 f"The break at {break_position / 1e3:g} km leaves no plate before the line's end at {end / 1e3:g} km."
             )
-        alpha = float(flexural_parameter(self.elastic.rigidity(thickness), self.stiffness.max()))
-        fixed = self._jumps[(self._jumps > begin) & (self._jumps < end)]
+        fixed = np.union1d(self._jumps, self.thickness_jumps(break_position))
+        fixed = fixed[(fixed > begin) & (fixed < end)]
         if self.kind != BROKEN and self.shear and begin < break_position < end:
             fixed = np.union1d(fixed, break_position)
         fixed = np.concatenate([[begin], fixed, [end]])
         gaps = np.diff(fixed)
-        parts = np.ceil(gaps * (ELEMENTS_PER_ALPHA / alpha)).astype(int)
+        thinnest = self.thinnest(thickness, break_position, fixed)
+        alpha = flexural_parameter(self.elastic.rigidity(thinnest), self.stiffness.max())
+        wanted = np.ceil(gaps * (ELEMENTS_PER_ALPHA / alpha))
+        if not wanted.sum() <= MOST_ELEMENTS:
+            raise DownwarpError(
+                f"A line of {(end - begin) / 1e3:g} km is too long for a plate as thin as {thinnest.min() / 1e3:g} km: "
+                f"that takes {wanted.sum():.3g} elements, and at most {MOST_ELEMENTS} are taken."
+            )
+        parts = wanted.astype(int)
         first = np.repeat(fixed[:-1], parts)
         place = np.arange(parts.sum()) - np.repeat(np.cumsum(parts) - parts, parts)
         return np.append(first + place * np.repeat(gaps / parts, parts), end)
@@ -107,7 +134,8 @@ class TransectModel:
             k = per_interval[self._interval(0.5 * (nodes[1:] + nodes[:-1]))]
         by_kind = FREE_END if self.kind == BROKEN else CONTINUES
         start = by_kind if self.start is None else self.start
-        return Plate(nodes, self.elastic.rigidity(thickness), k, self.in_plane, start, self.finish)
+        rigidity = self.rigidity(thickness, break_position, nodes)
+        return Plate(nodes, rigidity, k, self.in_plane, start, self.finish)
 
     def _interval(self, positions: np.ndarray) -> np.ndarray:
         return np.clip(np.searchsorted(self.distance, positions, side="right") - 1, 0, self.distance.size - 2)
@@ -142,7 +170,18 @@ class TransectModel:
         """Nodal forces of the load, (2 n, 1)."""
         if not self.load.any():
             return np.zeros((2 * plate.nodes.size, 1))
-        return plate.load_vector(self.load, at=self.distance)
+        at, load = self._load_knots
+        return plate.load_vector(load, at=at)
+
+    @cached_property
+    def _load_knots(self) -> tuple[np.ndarray, np.ndarray]:
+        """Stations between which the load is linear, m, and the load there, Pa: of a stretch without load, its ends."""
+        loaded = self.load != 0
+        kept = loaded.copy()
+        kept[1:] |= loaded[:-1]
+        kept[:-1] |= loaded[1:]
+        kept[[0, -1]] = True
+        return self.distance[kept], self.load[kept]
 
     def bend(self, thickness: float, break_position: float, forces: np.ndarray) -> Bending:
         """The bent plate under its load and end forces (in the order of `end_forces`)."""

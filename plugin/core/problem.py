@@ -24,6 +24,7 @@ from .settings import (
     GIVEN,
     LOAD_NONE,
     LOAD_RELIEF,
+    MAPPED,
     MEASURED,
     TRENCH,
     VOLCANO,
@@ -182,7 +183,7 @@ def prepare(profile: Profile, options: FitOptions, search_steps: int = 21) -> Pr
             remarks.append(f"{int((~known).sum())} stations have no DEM value; the load is bridged over them")
         for end, index in (("start", 0), ("end", -1)):
             begins_there = end == "start" and options.chosen("plate")[0] == BROKEN
-            if load[index] != 0 and not begins_there:
+            if load[index] != 0 and not begins_there and options.load_shape != MAPPED:
                 remarks.append(f"the load reaches the line's {end} and is held constant beyond it")
     breaks, break_origin = _breaks(profile, options, search_steps)
     return Problem(
@@ -222,7 +223,8 @@ def _load_stations(
     """Stations that carry load, and those whose surface is the load's own and so is left out of the fit, each (n,).
 
     Both are the area given, where one was. Otherwise the main rises (`load_mask`) are left out; they are all of the
-    load where the same DEM shows the bent surface, else all that rises above the level is.
+    load where the same DEM shows the bent surface, else all that rises above the level is. In a DEM that shows both, a
+    station within a cell of the load mixes the two, and is left out as well.
     """
     if load_kind == LOAD_NONE or level is None:
         nowhere = np.zeros(profile.distance.shape, dtype=bool)
@@ -231,9 +233,22 @@ def _load_stations(
     above = np.nan_to_num(profile.relief - base, nan=0.0) > 0
     given = _given_area(profile, options)
     if given is not None:
-        return given & above, given
+        return given & above, _widened(given, profile) if bare else given
     main = load_mask(profile.relief, base)
-    return (main if bare else above), main
+    return (main, _widened(main, profile)) if bare else (above, main)
+
+
+def _widened(inside: np.ndarray, profile: Profile) -> np.ndarray:
+    """The stations of a mask and those within the data's resolution of them, (n,)."""
+    places = profile.distance[inside]
+    if places.size == 0:
+        return inside
+    after = np.clip(np.searchsorted(places, profile.distance), 1, places.size) - 1
+    nearest = np.minimum(
+        np.abs(profile.distance - places[after]),
+        np.abs(profile.distance - places[np.minimum(after + 1, places.size - 1)]),
+    )
+    return nearest <= 1.001 * profile.resolution
 
 
 def _breaks(profile: Profile, options: FitOptions, steps: int) -> tuple[np.ndarray, str]:

@@ -3,11 +3,15 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from . import check
 from .errors import DownwarpError
+
+if TYPE_CHECKING:
+    from .plan import PlanRelief  # it needs profiles itself
 
 
 def _none() -> np.ndarray:
@@ -48,12 +52,16 @@ class Profile:
     """Distance, m, over which neighbouring values are not independent readings: the raster's cell size."""
     remarks: tuple[str, ...] = ()
     """What befell the sampling, in words."""
+    plan: PlanRelief | None = None
+    """The relief about the line; None where the load is a strip."""
+    thickness: np.ndarray | None = None
+    """Elastic thickness stated along the line, m, shape (n,), NaN where there is none; None where none is stated."""
 
     def __post_init__(self) -> None:
         object.__setattr__(
             self, "distance", check.increasing(f"the distance of the stations of {self.name}", self.distance)
         )
-        for name in ("relief", "observed", "sigma", "in_load_area", "excluded"):
+        for name in ("relief", "observed", "sigma", "in_load_area", "excluded", "thickness"):
             values = getattr(self, name)
             if values is not None and np.shape(values) != self.distance.shape:
                 raise DownwarpError(f"{name} has shape {np.shape(values)}; it takes {self.distance.shape}.")

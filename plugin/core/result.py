@@ -118,12 +118,25 @@ class ChoiceRow:
 
 
 @dataclass(frozen=True)
+class ZonesFit:
+    """A plate that weakens towards its break."""
+
+    near: Estimate
+    """Elastic thickness nearer to the break than the change, m; its value is None where the data resolve no plate."""
+    change: Estimate
+    """Distance of the change from the break, m."""
+    log_odds: float
+    """ln odds of two zones against one, 1."""
+
+
+@dataclass(frozen=True)
 class Fit:
     """A fitted plate of one kind."""
 
     kind: int
     thickness: Estimate
-    """Elastic thickness, m; its value is None where the data do not resolve a plate."""
+    """Elastic thickness, m (of two zones, that beyond the change); its value is None where the data do not resolve a
+    plate."""
     break_position: Estimate
     """m from the line's start."""
     coefficients: dict[str, Estimate]
@@ -140,6 +153,8 @@ class Fit:
     bent: Bent
     """The best-fitting plate."""
     remarks: tuple[str, ...] = ()
+    zones: ZonesFit | None = None
+    """None where the plate has one thickness."""
 
 
 @dataclass(frozen=True)

@@ -21,6 +21,9 @@ FORCES_NONE, FORCES_SHEAR, FORCES_MOMENT, FORCES_BOTH, FORCES_AS_SETTING = range
 REGIONAL_NONE, REGIONAL_LEVEL, REGIONAL_TILT, REGIONAL_BOW, REGIONAL_AS_SETTING = range(5)
 """Regional surfaces, in the order of the key REGIONAL: the number of their coefficients."""
 
+STRIP, MAPPED = range(2)
+"""Shapes of the load, in the order of the key LOAD_SHAPE."""
+
 PLATE_NAMES = ("continuous", "broken")
 
 GIVEN, FROM_SETTING, MEASURED, FITTED = "given", "setting", "measured", "fitted"
@@ -101,6 +104,15 @@ class FitOptions:
     sigma: float | None = None
     robust: bool = False
     confidence: float = 0.9
+    load_shape: int = STRIP
+    check_strip: bool = False
+    """Whether a fit with a strip is told what the strip is worth."""
+    zones: int = 1
+    """Zones of elastic thickness: 1, or 2 with a change at a distance from the break."""
+    zone_from: float | None = None
+    """Nearest distance of that change, m; None for a usual one."""
+    zone_to: float | None = None
+    """Farthest distance of it, m; the change is held where both are equal."""
 
     def __post_init__(self) -> None:
         for key, choice, count in (
@@ -110,6 +122,7 @@ class FitOptions:
             ("LOAD", self.load, 4),
             ("END_FORCES", self.end_forces, 5),
             ("REGIONAL", self.regional, 5),
+            ("LOAD_SHAPE", self.load_shape, 2),
         ):
             if choice not in range(count):
                 raise DownwarpError(f"{key} is {choice!r}; it takes a number from 0 to {count - 1}.")
@@ -151,6 +164,44 @@ class FitOptions:
             check.number("FILL_LEVEL", self.fill_level, at_least=-20000, at_most=20000)
         check.number("IN_PLANE", self.in_plane)
         check.number("CONFIDENCE", self.confidence * 100, above=0, below=100)
+        self._check_zones()
+        if self.load_shape == MAPPED:
+            self._check_mapped()
+
+    def _check_mapped(self) -> None:
+        """Refuse what a plan view does not have."""
+        needs = "LOAD_SHAPE is 1 (as mapped), which takes"
+        plate, forces = self.chosen("plate")[0], self.chosen("end_forces")[0]
+        if plate != CONTINUOUS:
+            raise DownwarpError(f"{needs} a continuous plate (PLATE 0), but PLATE comes to {plate}.")
+        if forces != FORCES_NONE:
+            raise DownwarpError(f"{needs} no end forces (END_FORCES 0), but END_FORCES comes to {forces}.")
+        if self.in_plane:
+            raise DownwarpError(f"{needs} no in-plane force, but IN_PLANE is {self.in_plane:g}.")
+        if self.fill_sinking_only:
+            raise DownwarpError(f"{needs} one infill everywhere: leave FILL_SINKING_ONLY out.")
+        if self.zones > 1:
+            raise DownwarpError(f"{needs} one thickness, but TE_ZONES is {self.zones}.")
+
+    def _check_zones(self) -> None:
+        if self.zones not in (1, 2):
+            raise DownwarpError(f"TE_ZONES is {self.zones!r}; it takes 1 or 2.")
+        for key, value in (("ZONE_CHANGE_FROM", self.zone_from), ("ZONE_CHANGE_TO", self.zone_to)):
+            if value is not None:
+                check.number(key, value / 1e3, above=0)
+        if self.zone_from is not None and self.zone_to is not None and self.zone_from > self.zone_to:
+            raise DownwarpError(
+                f"ZONE_CHANGE_FROM ({self.zone_from / 1e3:g} km) must not be above ZONE_CHANGE_TO "
+                f"({self.zone_to / 1e3:g} km)."
+            )
+        if self.zones == 1:
+            return
+        needs = "TE_ZONES is 2, which takes"
+        plate = self.chosen("plate")[0]
+        if plate != BROKEN:
+            raise DownwarpError(f"{needs} a broken plate (PLATE 1), but PLATE comes to {plate}.")
+        if self.chosen("break_at")[0] == BREAK_SEARCHED:
+            raise DownwarpError(f"{needs} a break that is held, but BREAK_AT is {BREAK_SEARCHED} (searched).")
 
     @property
     def defaults(self) -> Setting:

@@ -255,17 +255,22 @@ class Transect:
         )
         return longitude, latitude, back + 180.0
 
-    # pyproj 3.5 returns scalars for arrays of one element; below, arrays stay arrays.
+    # pyproj 3.5 returns scalars for arrays of one element, and later ones warn of them; below, arrays stay arrays.
 
     def _inverse(self, *places: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Azimuth at the start, back azimuth at the end, and length of geodesics between places (`Geod.inv`)."""
-        azimuth, back, length = (np.atleast_1d(values) for values in self.ellipsoid.inv(*places))
+        azimuth, back, length = (np.atleast_1d(values) for values in self.ellipsoid.inv(*_plain(places)))
         return azimuth, back, length
 
     def _direct(self, *places: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Longitude, latitude and back azimuth at the ends of geodesics of given azimuth and length (`Geod.fwd`)."""
-        longitude, latitude, back = (np.atleast_1d(values) for values in self.ellipsoid.fwd(*places))
+        longitude, latitude, back = (np.atleast_1d(values) for values in self.ellipsoid.fwd(*_plain(places)))
         return longitude, latitude, back
+
+
+def _plain(places: tuple[np.ndarray, ...]) -> list:
+    """Arrays, those of one element as the number in them."""
+    return [values.item() if np.size(values) == 1 else values for values in map(np.asarray, places)]
 
 
 def _between_half_turns(angle: np.ndarray) -> np.ndarray:

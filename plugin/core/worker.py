@@ -29,6 +29,9 @@ def load_package(name: str, folder: str) -> None:
 def main() -> None:
     """Answer jobs, each the arguments of `fit_profile`, until standard input ends."""
     name, folder = sys.argv[1:3]
+    # A script's own folder comes first on the path, where profile.py would hide the standard library's.
+    own = os.path.dirname(os.path.abspath(__file__))
+    sys.path[:] = [path for path in sys.path if os.path.abspath(path or os.curdir) != own]
     answers = os.fdopen(os.dup(sys.stdout.fileno()), "wb")
     # What anything prints must not come between the answers.
     os.dup2(sys.stderr.fileno(), sys.stdout.fileno())

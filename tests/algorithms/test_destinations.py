@@ -192,6 +192,33 @@ def test_run_that_fails_while_it_writes_leaves_earlier_files(keys, tmp_path, mon
     assert {path: path.read_bytes() for path in tmp_path.iterdir()} == before
 
 
+def test_cancelled_at_any_moment_leaves_earlier_files(keys, tmp_path):
+    """Cancelled at each sign of progress: a refusal, and the earlier files' bytes."""
+    targets = {name: str(tmp_path / f"{name.lower()}.{kind}") for name, kind in zip(LAYERS, ("gpkg", "fgb", "csv"))}
+    watching = Quiet()
+    run("fittransects", {**keys, **targets}, watching, sinks=())
+    before = {path: path.read_bytes() for path in tmp_path.iterdir()}
+    moments = len(watching.fractions)
+    assert moments >= 5
+    for moment in range(moments):
+        feedback = Quiet()
+
+        def count(fraction, feedback=feedback, moment=moment):
+            if len(feedback.fractions) > moment:
+                feedback.cancel()
+
+        feedback.progressChanged.connect(count)
+        try:
+            run("fittransects", {**keys, **targets, "TE_TO": 60}, feedback, sinks=())
+        except QgsProcessingException as error:
+            assert "Cancelled" in str(error)
+            assert {path: path.read_bytes() for path in tmp_path.iterdir()} == before
+        else:
+            # The last sign of progress comes once all is written.
+            assert moment >= moments - 2
+            assert sorted(tmp_path.iterdir()) == sorted(before)
+
+
 def test_file_that_cannot_be_put_into_place_is_said(keys, tmp_path, monkeypatch):
     """As where another program holds it open (on Windows): one sentence, and the earlier file stays."""
     target = tmp_path / "out.gpkg"

@@ -29,6 +29,7 @@ from scipy.special import bei, beip, ber, berp, kei, keip, ker, kerp
 
 WGS84 = Geod(ellps="WGS84")
 RELIEF = Path("/usr/share/ferret-vis/data/etopo5.cdf")
+SINKS = ("PROFILES", "STATIONS", "PARAMETERS", "MISFIT", "CHOICES")
 ZONE_FIELDS = tuple(f"{name}_{end}km" for name in ("te_near", "zone_change") for end in ("", "low_", "high_"))
 NEAR, BEYOND, CHANGE = 14.0, 40.0, 75.0
 """Two zones, km; the change lies on a station or near it."""
@@ -79,13 +80,13 @@ def ground(tmp_path_factory):
     }
 
 
-def fit(keys, **more):
-    return run("fittransects", {**keys, **more}, sinks=("PROFILES", "STATIONS", "PARAMETERS", "MISFIT", "CHOICES"))
+def fit(keys, sinks=("PROFILES", "STATIONS", "PARAMETERS"), **more):
+    return run("fittransects", {**keys, **more}, sinks=sinks)
 
 
 @pytest.fixture(scope="module")
 def two(ground):
-    return fit(ground["weak"], TE_ZONES=2, CONFIDENCE=99)
+    return fit(ground["weak"], SINKS, TE_ZONES=2, CONFIDENCE=99)
 
 
 def test_two_zones_are_given_back(two):
@@ -179,6 +180,7 @@ def test_stations_are_fitted_with_the_same_zones(ground, two):
         ),
         ({"TE_ZONES": 2, "ZONE_CHANGE_FROM": -5}, "ZONE_CHANGE_FROM"),
         ({"TE_ZONES": 2, "ZONE_CHANGE_TO": 5000}, "ZONE_CHANGE_TO is 5000 km, but what is fitted reaches"),
+        ({"TE_ZONES": 2, "STEP_KM": 0.9}, "TE_ZONES is 2, which takes at most 750 stations, but the line has 780"),
         ({"TE_ZONES": 2, "ZONE_CHANGE_FROM": 300}, "ZONE_CHANGE_FROM is 300 km, but the change is sought up to"),
         ({"LOAD_SHAPE": 1}, "LOAD_SHAPE is 1 (as mapped), which takes a continuous plate (PLATE 0)"),
         ({"LOAD_SHAPE": 2}, "LOAD_SHAPE"),
@@ -246,7 +248,7 @@ def disk(tmp_path_factory):
 def test_a_round_load_as_mapped_gives_its_plate_back(disk):
     """The surface under a disk, from the Kelvin functions: 25 km as mapped to 2 %, something else as a strip; PARAMETERS
     name the shape."""
-    mapped, strip = (fit(disk["both"], LOAD_SHAPE=shape) for shape in (1, 0))
+    mapped, strip = (fit(disk["both"], SINKS, LOAD_SHAPE=shape) for shape in (1, 0))
     assert mapped["TE_KM"] == pytest.approx(25, rel=0.02)
     assert not 24 < (strip["TE_KM"] or 0) < 26
     assert mapped["RMS_M"] < 0.01 * strip["RMS_M"]

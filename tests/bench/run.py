@@ -5,6 +5,7 @@ Each function in BENCHMARKS yields rows (what, seconds, ratio or None, note); ad
 
 from __future__ import annotations
 
+import math
 import os
 import sys
 import timeit
@@ -17,8 +18,10 @@ sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
 
 import conftest  # noqa: F401 - makes the checkout importable
 import numpy as np
+import scipy.fft
 from downwarp_checkout.plugin.core import elastic
 from downwarp_checkout.plugin.core.plate import BROKEN, CLAMPED, Plate
+from downwarp_checkout.plugin.core.sheet import Sheet, SheetLine
 from scipy.integrate import solve_bvp
 from scipy.linalg.lapack import dpbsv
 
@@ -142,7 +145,36 @@ def against_collocation() -> Iterator[Row]:
     yield "solve_bvp, equally accurate", spent, spent / taken, note
 
 
-BENCHMARKS = (forward_solve, against_collocation)
+def plan_view() -> Iterator[Row]:
+    """A trial thickness under a load as mapped, on a padded grid of 512 x 512 cells, beside one real transform."""
+    alpha = float(elastic.flexural_parameter(RIGIDITY, STIFFNESS))
+    spacing = alpha / 12.0
+    cells = 512 - math.ceil(5.0 * alpha / spacing)
+    away = (np.arange(cells) - cells // 2) * spacing
+    load = 5e7 * np.exp(-(away[:, None] ** 2 + away**2) / 40e3**2)
+    sheet = Sheet(load, spacing, 5.0 * alpha)
+    grid = np.zeros(sheet.shape)
+    straight = SheetLine(sheet, np.full(STATIONS, 0.5 * cells), np.linspace(60.0, cells - 60.0, STATIONS))
+    oblique = SheetLine(sheet, *np.tile(np.linspace(60.0, cells - 60.0, STATIONS), (2, 1)))
+    for line in (straight, oblique):  # what is made once
+        line.deflection(RIGIDITY, STIFFNESS)
+    transform = seconds(lambda: scipy.fft.rfft2(grid))
+    yield (
+        "scipy rfft2, {} x {}".format(*sheet.shape),
+        transform,
+        1.0,
+        "the measure of the rows below; at most 3 is wanted",
+    )
+    for what, call in (
+        ("trial thickness, whole sheet", lambda: sheet.deflection(RIGIDITY, STIFFNESS)),
+        (f"trial thickness, {STATIONS} stations along the grid", lambda: straight.deflection(RIGIDITY, STIFFNESS)),
+        (f"trial thickness, {STATIONS} stations across all rows", lambda: oblique.deflection(RIGIDITY, STIFFNESS)),
+    ):
+        taken = seconds(call)
+        yield what, taken, taken / transform, "of rfft2"
+
+
+BENCHMARKS = (forward_solve, against_collocation, plan_view)
 
 
 def main() -> None:

@@ -336,6 +336,10 @@ def _break_table(pool, lines: int) -> list[str]:
     ]
 
 
+def _span(ratios: tuple[float, float]) -> str:
+    return " to ".join(dict.fromkeys(f"{ratio:g}" for ratio in ratios))
+
+
 def _kind_table(pool, lines: int) -> list[str]:
     noises = ((0, 0.0), (1, 15e3), (2, 15e3))
     tasks = [(*each, ratios, lines) for ratios in ((3.0, 30.0), (3.0, 3.0), (0.5, 0.5)) for each in noises]
@@ -345,7 +349,7 @@ def _kind_table(pool, lines: int) -> list[str]:
         "| bulge / noise | noise | odds favour the right kind | decided rightly | undecided | decided wrongly |",
         "| --- | --- | --- | --- | --- | --- |",
         *(
-            f"| {' to '.join(dict.fromkeys(f'{ratio:g}' for ratio in task[2]))} | {noise_name(*task[:2])} | {row[0]:.2f} | {row[1]:.2f} | {row[2]:.2f} | {row[3]:.2f} |"
+            f"| {_span(task[2])} | {noise_name(*task[:2])} | {row[0]:.2f} | {row[1]:.2f} | {row[2]:.2f} | {row[3]:.2f} |"
             for task, row in zip(tasks, pool.map(plate_kind, tasks))
         ),
     ]

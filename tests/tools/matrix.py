@@ -106,6 +106,7 @@ def environment() -> dict[str, str]:
         HOME="/root",
         LANG="C.UTF-8",
         TERM="dumb",
+        OPENBLAS_NUM_THREADS="1",
         DEBIAN_FRONTEND="noninteractive",
         PATH="/usr/local/sbin:/usr/local/bin:/usr/sbin:/usr/bin:/sbin:/bin",
     )
