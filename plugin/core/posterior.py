@@ -506,7 +506,7 @@ def _weigh(line: _Line, noise: NoiseFamily, grid: _Grid, settings: tuple[Setting
     coordinates = grid.coordinates
     trials, _, width = coordinates.shape
     plate = width - 1
-    flat = np.moveaxis(coordinates, 1, 0).reshape(rank, -1)
+    flat = np.moveaxis(coordinates, 1, 0).reshape(rank, trials * width)
 
     def inner_products(middle: np.ndarray) -> np.ndarray:
         turned = np.moveaxis((middle @ flat).reshape(rank, trials, width), 0, 1)
