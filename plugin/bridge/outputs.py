@@ -97,6 +97,8 @@ class Outputs:
         self._destinations = Destinations(algorithm, parameters, context)
         self._sinks: dict[str, tuple[QgsFeatureSink | None, Any]] = {}
         self._left_out: dict[str, int] = {}
+        self._bare: set[str] = set()
+        """Sinks that can hold rows without geometry."""
         self.results: dict[str, Any] = {}
         for name in FIELDS:
             definition = algorithm.parameterDefinition(name)
@@ -119,6 +121,8 @@ class Outputs:
             elif self._parameters.get(name):
                 raise QgsProcessingException(self._algorithm.invalidSinkError(self._parameters, name))
             self._sinks[name] = (sink, fields)
+            if self._destinations.holds_bare_rows(name):
+                self._bare.add(name)
         return self._sinks[name]
 
     def open(self, names: tuple[str, ...]) -> None:
@@ -131,7 +135,7 @@ class Outputs:
         sink, fields = self._sink(name)
         if sink is None:
             return
-        if geometry is None and not self._destinations.holds_bare_rows(name):
+        if geometry is None and name not in self._bare:
             self._left_out[name] = self._left_out.get(name, 0) + 1
             return
         feature = QgsFeature(fields)
