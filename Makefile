@@ -52,6 +52,8 @@ fuzz: setup-test
 
 bench: setup-test
 	@$(PYTHON) tests/bench/run.py
+	@$(PYTHON) tests/bench/many.py
+	@rm -rf build/bench-window && mkdir -p build && $(PYTHON) tests/window/play.py build/bench-window starts draws slides slides_on_many_stations
 
 calibrate: setup-test
 	@$(PYTHON) tests/calibration/run.py

@@ -52,7 +52,7 @@ def test_zip_holds_one_folder_with_all_that_runs(names):
 
 
 def test_zip_holds_nothing_else(archive, names):
-    """No caches, hidden files, tests or build files; no binaries but pictures; below the 25 MB that the plugin repository takes."""
+    """No caches, hidden files, tests or build files; no binaries but pictures; below the plugin repository's 25 MB."""
     tops = {name.split("/")[1] for name in names}
     assert tops <= {*package.FILES, *package.FOLDERS}
     assert not [name for name in names if "__pycache__" in name or "/." in name]

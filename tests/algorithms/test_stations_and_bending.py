@@ -281,10 +281,10 @@ def test_a_swath_carries_its_standard_error(folder, trench):
     whose square is 1/2 on average.
     """
     cell = invented.CELL
-    longitude = 18.0 + cell * np.arange(500)
     latitude = 4 * cell - cell * (np.arange(8) + 0.5)
     north_km = latitude[:, None] * 110.574
-    path = invented.write_grid(folder / "slope.tif", 10.0 * north_km * np.sin(np.arange(500) / 5.0), 18 - cell / 2, 4 * cell, cell)
+    waves = 10.0 * north_km * np.sin(np.arange(500) / 5.0)
+    path = invented.write_grid(folder / "slope.tif", waves, 18 - cell / 2, 4 * cell, cell)
     table = rows(sampled({**trench, "DEM": path}, SWATH_KM=8, SWATH_LINES=2, OBSERVED=path))
     expected = 10.0 * np.std([-2.0, 2.0], ddof=1) / 2**0.5 * 0.5**0.5
     assert np.sqrt(np.mean(column(table, "sigma_m") ** 2)) == pytest.approx(expected, rel=0.03)

@@ -20,7 +20,11 @@ import conftest  # noqa: F401 - makes the checkout importable
 import numpy as np
 import scipy.fft
 from downwarp_checkout.plugin.core import elastic
+from downwarp_checkout.plugin.core.fit import fit_profile
+from downwarp_checkout.plugin.core.forward import TransectModel
 from downwarp_checkout.plugin.core.plate import BROKEN, CLAMPED, Plate
+from downwarp_checkout.plugin.core.profile import Profile
+from downwarp_checkout.plugin.core.settings import BREAK_SEARCHED, FORELAND, FitOptions
 from downwarp_checkout.plugin.core.sheet import Sheet, SheetLine
 from scipy.integrate import solve_bvp
 from scipy.linalg.lapack import dpbsv
@@ -174,7 +178,44 @@ def plan_view() -> Iterator[Row]:
         yield what, taken, taken / transform, "of rfft2"
 
 
-BENCHMARKS = (forward_solve, against_collocation, plan_view)
+def full_fit() -> Iterator[Row]:
+    """Fits of a made foreland, in units of LAPACK's band solve of 300 stations: thickness alone, with the break searched
+    at 21 places, and with choices as well; then thickness alone at four station steps, in units of the longest."""
+    unit = None
+    for stations, options, choices, what in (
+        (301, {}, False, "fit, 301 stations"),
+        (301, {"break_at": BREAK_SEARCHED, "break_from": 0.0, "break_to": 40e3}, False, "and break search, misfit"),
+        (301, {"break_at": BREAK_SEARCHED, "break_from": 0.0, "break_to": 40e3}, True, "and choices"),
+    ):
+        profile = made_foreland(stations)
+        asked = FitOptions(setting=FORELAND, reference_level=0.0, **options)
+        plate = Plate(profile.distance, RIGIDITY, STIFFNESS, 0.0, BROKEN)
+        band, vector = plate.band, plate.load_vector(np.ones(stations))
+        unit = unit or seconds(lambda band=band, vector=vector: dpbsv(band, vector, lower=1))
+        taken = seconds(lambda p=profile, o=asked, c=choices: fit_profile(p, o, None, c), repeats=3)
+        yield what, taken, taken / unit, "ratio: band solves of its 301 stations"
+    first = None
+    for step in (5.0, 2.0, 1.0, 0.5):
+        profile = made_foreland(round(600 / step) + 1)
+        asked = FitOptions(setting=FORELAND, reference_level=0.0)
+        taken = seconds(lambda p=profile, o=asked: fit_profile(p, o, None, False), repeats=3)
+        first = first or taken
+        yield f"fit, step {step:g} km", taken, taken / first, f"{profile.distance.size} stations; ratio: step 5 km"
+
+
+def made_foreland(stations: int) -> Profile:
+    """A broken plate of 25 km under mountains, 600 km long, with noise."""
+    distance = np.linspace(0.0, SPAN, stations)
+    relief = np.where(distance < 60e3, 2000.0, 0.0)
+    load = relief * 2670 * 9.81
+    stiffness = np.full(stations - 1, (3300 - 2400) * 9.81)
+    model = TransectModel(distance, load, stiffness, elastic.Elastic(), shear=True)
+    deflection = model.bend(25e3, 20e3, np.array([SHEAR])).at(np.maximum(distance, 20e3))[:, 0]
+    noise = 20.0 * np.random.default_rng(0).standard_normal(stations)
+    return Profile("made", distance, relief, -1500.0 - deflection + noise, resolution=2e3)
+
+
+BENCHMARKS = (forward_solve, against_collocation, plan_view, full_fit)
 
 
 def main() -> None:
