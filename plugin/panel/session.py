@@ -19,6 +19,7 @@ from ..core.bend import bend_problem
 from ..core.errors import DownwarpError
 from ..core.fit import REGIONAL_NAMES, complete_sigma, fit_profile, trial_columns
 from ..core.forward import TransectModel
+from ..core.mapped import forward_model
 from ..core.problem import Observations, Problem, prepare
 from ..core.profile import Profile
 from ..core.result import Bent, FitResult
@@ -63,6 +64,7 @@ class Session:
         self._result: FitResult | None = None
         self._fitted_from: tuple[FitOptions, bytes] | None = None
         self._problems: dict[float | None, Problem] = {}
+        self._mapped: tuple[Problem, TransectModel] | None = None
 
     @property
     def profile(self) -> Profile:
@@ -202,11 +204,17 @@ class Session:
         )
         return View(bent, rms, seen.distance.size)
 
+    def _model(self, problem: Problem) -> TransectModel:
+        """The forward model of a problem; the one of a mapped load is kept, for its spectrum takes time."""
+        if self._mapped is None or self._mapped[0] is not problem:
+            self._mapped = problem, forward_model(problem, self.kind)[0]
+        return self._mapped[1]
+
     def _solved(self, trial: Trial) -> tuple[Problem, TransectModel, np.ndarray, float, Observations]:
         """Problem, model, coefficients in the model's order, rms (m) and what was observed."""
         problem = self.problem(trial.break_position)
         kind, at = self.kind, float(problem.breaks[0])
-        model = problem.model(kind)
+        model = self._model(problem)
         seen = problem.observations()
         if trial.forces is None:
             offsets, columns = trial_columns(model, np.array([trial.thickness]), at, seen.distance, seen)

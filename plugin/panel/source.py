@@ -33,6 +33,7 @@ SAMPLING_KEYS = frozenset(
     key.name
     for group in (
         keys.LINES, keys.RELIEF, keys.OBSERVED, keys.PICKS, keys.STATIONS, keys.LOAD_AREA, keys.EXCLUDE,
+        keys.LOAD_SHAPE, keys.STRIP_WARNING,
     )
     for key in group
 )  # fmt: skip
