@@ -64,16 +64,17 @@ def fit_profile(
     told = progress if progress is not None else _silent
     tell = functools.partial(_share, told, 0.0, 0.3 if with_choices else 1.0)
     problem = prepare(profile, options)
+    tried: list[tuple[float, float]] = []
     for part in range(LEVEL_ROUNDS):
         fits, comparison = _fit_kinds(problem, functools.partial(_share, tell, part / LEVEL_ROUNDS, 1 / LEVEL_ROUNDS))
         best = fits[0]
         level = _fitted_level(problem, best)
         if level is None or abs(level - (problem.reference_level or 0.0)) < LEVEL_SETTLED:
             break
+        tried.append((problem.reference_level or 0.0, level))
         if part + 1 < LEVEL_ROUNDS:
-            problem = replace(
-                prepare(profile, replace(options, reference_level=level)), options=options, reference_origin=FITTED
-            )
+            asked = replace(options, reference_level=_next_level(tried))
+            problem = replace(prepare(profile, asked), options=options, reference_origin=FITTED)
     choices: tuple[ChoiceRow, ...] = ()
     if with_choices:
         choices = try_choices(problem, best, fit_kind, functools.partial(_share, told, 0.3, 0.7))
@@ -85,6 +86,20 @@ def fit_profile(
         parameters += (Parameter("log_odds_of_continuous_plate", comparison.log_odds, "1", FITTED),)
     remarks += _bend_left_to_noise(best) + moving_choices(choices, best) + _strip_checked(problem, best)
     return FitResult(best, parameters, tuple(fits), choices, tuple(dict.fromkeys(remarks)))
+
+
+def _next_level(tried: list[tuple[float, float]]) -> float:
+    """The reference level to try next, m up, from levels tried and those that the fit then found.
+
+    Where the two would meet on the straight line through the last two pairs; the level found itself the first time, and
+    where the line runs too nearly along the diagonal to tell.
+    """
+    level, found = tried[-1]
+    if len(tried) > 1 and level != tried[-2][0]:
+        slope = (found - tried[-2][1]) / (level - tried[-2][0])
+        if slope < 0.8:
+            return level + (found - level) / (1.0 - slope)
+    return found
 
 
 def _bend_left_to_noise(fit: Fit) -> tuple[str, ...]:
