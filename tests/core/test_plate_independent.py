@@ -174,13 +174,16 @@ supports = st.sampled_from([CONTINUES, BROKEN, PINNED, CLAMPED])
 
 @st.composite
 def plates(draw) -> Plate:
-    """Plates with uneven nodes, D and k that jump from element to element, a tolerable in-plane force and any ends."""
+    """Plates with uneven nodes, D and k that jump from element to element, an in-plane pull and any ends.
+
+    (A short plate with free ends topples under any push: what a plate can carry has tests of its own.)
+    """
     elements = draw(st.integers(2, 40))
-    steps = draw(st.lists(st.floats(2e3, 20e3), min_size=elements, max_size=elements))
-    exponents = draw(st.lists(st.floats(21.0, 24.5), min_size=elements, max_size=elements))
-    restoring = draw(st.lists(st.floats(2e3, 4e4), min_size=elements, max_size=elements))
+    steps = draw(st.lists(st.floats(2e3, 10e3), min_size=elements, max_size=elements))
+    exponents = draw(st.lists(st.floats(21.5, 23.5), min_size=elements, max_size=elements))
+    restoring = draw(st.lists(st.floats(1e4, 4e4), min_size=elements, max_size=elements))
     weakest = 2.0 * np.sqrt(10.0 ** min(exponents) * min(restoring))
-    in_plane = draw(st.floats(-2.0, 0.4)) * weakest
+    in_plane = draw(st.floats(-2.0, 0.0)) * weakest
     nodes = np.concatenate([[0.0], np.cumsum(steps)])
     return Plate(nodes, 10.0 ** np.array(exponents), np.array(restoring), in_plane, draw(supports), draw(supports))
 
