@@ -9,16 +9,12 @@ from qgis.core import QgsProcessingOutputNumber, QgsProcessingParameterFileDesti
 
 from ..plugin.bridge import age_run, referee_keys
 from ..plugin.bridge.algorithm import DownwarpAlgorithm
-from ..plugin.bridge.frames import Frame
 from ..plugin.bridge.keys import Key, required_source, tr
 from ..plugin.bridge.outputs import Outputs, add_sinks
-from ..plugin.bridge.rasters import RasterReader
 from ..plugin.bridge.run_report import inputs_of, versions
 from ..plugin.bridge.runs import run_each
 from ..plugin.bridge.stations import has_places
-from ..plugin.bridge.strength_run import AgeReader
-from ..plugin.core.constants import MYR
-from ..plugin.core.errors import DownwarpError
+from ..plugin.bridge.strength_run import age_reader
 from ..plugin.report.referee import write_age_report
 
 
@@ -49,16 +45,7 @@ class AgeThickness(DownwarpAlgorithm):
 
     def resolve(self, values, parameters, context) -> None:
         self._source = required_source(self, parameters, "INPUT", context)
-        self._age = None
-        if values.given("AGE"):
-            layer = self.parameterAsRasterLayer(parameters, "AGE", context)
-            if layer is None:
-                raise DownwarpError(f"AGE is not a raster that can be read: {parameters.get('AGE')}.")
-            if not has_places(self._source):
-                raise DownwarpError("INPUT has no geometry, which AGE needs; give AGE_MYR or AGE_FIELD.")
-            frame = Frame.of(self._source.sourceCrs(), "INPUT")
-            reader = RasterReader(layer, values.whole("AGE_BAND"), frame, "AGE")
-            self._age = AgeReader(reader, frame, values.required_number("AGE_UNIT_MYR") * MYR)
+        self._age = age_reader(self, values, parameters, context, self._source, "AGE_MYR or AGE_FIELD")
 
     def carry_out(self, parameters, context, feedback):
         values = self.values(parameters, context)

@@ -107,9 +107,8 @@ def station_rows(bent: Bent, thickness_known: bool = True) -> Iterator[Row]:
 def sampled_columns(profile: Profile) -> dict[str, np.ndarray]:
     """STATIONS values that are there without a plate."""
     columns = {"distance_km": profile.distance / 1e3, "dem_m": profile.relief}
-    observed = profile.observed if profile.observed is not None else None
-    if observed is not None:
-        columns["observed_m"] = observed
+    if profile.observed is not None:
+        columns["observed_m"] = profile.observed
     if profile.sigma is not None:
         columns["sigma_m"] = profile.sigma
     return columns

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from functools import partial
 
 import numpy as np
+from qgis.core import QgsFeatureSource
 
 from ..core.constants import MYR
 from ..core.cooling import STEADY, Geotherm
@@ -22,6 +23,7 @@ from .outputs import Outputs, Track
 from .rasters import RasterReader
 from .referee_keys import check_age, geotherm
 from .rows import Row, as_rows
+from .stations import has_places
 
 SINKS = ("VERDICTS", "ENVELOPES", "MOMENTS")
 NUMBERS = {
@@ -80,6 +82,25 @@ class AgeReader:
         if not (age > 0).any():
             raise DownwarpError(f"{name}: AGE has no age above 0 there.")
         return age
+
+
+def age_reader(
+    algorithm, values: Values, parameters, context, source: QgsFeatureSource, instead: str
+) -> AgeReader | None:
+    """The raster of AGE, to be asked at places of ``source``, the layer of INPUT; None where it is blank.
+
+    ``instead``: the keys that say the age where INPUT has no geometry. Raises DownwarpError where it cannot be read.
+    """
+    if not values.given("AGE"):
+        return None
+    layer = algorithm.parameterAsRasterLayer(parameters, "AGE", context)
+    if layer is None:
+        raise DownwarpError(f"AGE is not a raster that can be read: {parameters.get('AGE')}.")
+    if not has_places(source):
+        raise DownwarpError(f"INPUT has no geometry, which AGE needs; give {instead}.")
+    frame = Frame.of(source.sourceCrs(), "INPUT")
+    reader = RasterReader(layer, values.whole("AGE_BAND"), frame, "AGE")
+    return AgeReader(reader, frame, values.required_number("AGE_UNIT_MYR") * MYR)
 
 
 @dataclass(frozen=True)

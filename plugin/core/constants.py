@@ -38,7 +38,6 @@ _BYERLEE = "Byerlee 1978, Pure and Applied Geophysics 116" + _FROM_MEMORY
 FRICTION_LOW = Constant("friction of rock, low pressure", "mu_1", 0.85, "1", _BYERLEE)
 FRICTION_HIGH = Constant("friction of rock, high pressure", "mu_2", 0.6, "1", _BYERLEE)
 COHESION_HIGH = Constant("cohesion of rock, high pressure", "C_2", 50e6, "Pa", _BYERLEE)
-FRICTION_CORNER = Constant("normal stress where the two laws meet", "sigma_n", 200e6, "Pa", _BYERLEE)
 
 _GOETZE = "Goetze 1978, Phil. Trans. R. Soc. A 288; Goetze & Evans 1979, Geophys. J. 59" + _FROM_MEMORY
 OLIVINE_FACTOR = Constant("dry olivine, dislocation creep", "A", 7.0e-14, "Pa^-n/s", _GOETZE)

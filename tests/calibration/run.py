@@ -11,7 +11,6 @@ TEMPERING) were set on other strips of the first five; the others verify them.
 from __future__ import annotations
 
 import argparse
-import importlib.util
 import os
 import sys
 import time
@@ -23,15 +22,9 @@ for _name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
 
 import numpy as np  # noqa: E402
 
-ROOT = Path(__file__).resolve().parents[2]
-if "downwarp_checkout" not in sys.modules:
-    _spec = importlib.util.spec_from_file_location(
-        "downwarp_checkout", ROOT / "__init__.py", submodule_search_locations=[str(ROOT)]
-    )
-    _package = importlib.util.module_from_spec(_spec)
-    sys.modules["downwarp_checkout"] = _package
-    _spec.loader.exec_module(_package)
+sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
 
+import conftest  # noqa: E402, F401 - makes the checkout importable
 from downwarp_checkout.plugin.core import elastic, noise, plate, posterior  # noqa: E402
 
 RELIEF = "/usr/share/ferret-vis/data/etopo5.cdf"
