@@ -16,8 +16,8 @@ from qgis.PyQt.QtCore import QPoint, Qt, pyqtSignal
 from qgis.PyQt.QtGui import QColor
 from qgis.PyQt.QtWidgets import QLabel
 
-from ..bridge.keys import tr
 from ..report.figures import INK, LOAD, PLATE
+from ..translation import tr
 
 PIECES = 60
 """Pieces in which the line between two vertices is drawn: it follows the shortest way over the ellipsoid."""

@@ -10,8 +10,8 @@ from qgis.gui import QgsFieldComboBox
 from qgis.PyQt.QtCore import pyqtSignal
 from qgis.PyQt.QtWidgets import QComboBox, QFormLayout, QHBoxLayout, QToolButton, QWidget
 
-from ..bridge.keys import tr
 from ..core.settings import REMOVED
+from ..translation import tr
 from .key_form import layer_box, options_box
 from .source import help_of
 

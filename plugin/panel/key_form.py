@@ -10,7 +10,8 @@ from qgis.gui import QgsFieldComboBox, QgsMapLayerComboBox, QgsProjectionSelecti
 from qgis.PyQt.QtCore import pyqtSignal
 from qgis.PyQt.QtWidgets import QCheckBox, QComboBox, QLabel, QLineEdit, QVBoxLayout, QWidget
 
-from ..bridge.keys import Key, tr
+from ..bridge.keys import Key
+from ..translation import tr
 from .source import fit_keys, help_of
 
 FILTERS = {

@@ -19,8 +19,8 @@ from qgis.PyQt.QtWidgets import (
     QWidget,
 )
 
-from ..bridge.keys import tr
 from ..core.settings import BREAK_GIVEN, BREAK_SEARCHED, BROKEN, SETTINGS
+from ..translation import tr
 from .key_form import options_box
 from .session import Session, Trial, View
 from .source import fit_keys, help_of
@@ -75,7 +75,10 @@ class PlatePage(QWidget):
         self._from_label, self._to_label = QLabel(tr("From")), QLabel(tr("To"))
         form = QFormLayout(self)
         form.setFieldGrowthPolicy(QFormLayout.FieldGrowthPolicy.AllNonFixedFieldsGrow)
-        form.setVerticalSpacing(4)
+        # All rows of a plate whose break is not searched are to be seen in a low panel.
+        form.setVerticalSpacing(2)
+        margins = form.contentsMargins()
+        form.setContentsMargins(margins.left(), 3, margins.right(), 3)
         for words, widget in (
             (tr("Plate"), self.plate),
             (tr("Break"), self.break_at),

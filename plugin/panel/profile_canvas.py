@@ -13,9 +13,9 @@ from matplotlib.patches import Rectangle
 from qgis.PyQt.QtCore import Qt, QTimer, pyqtSignal
 from qgis.PyQt.QtWidgets import QSizePolicy
 
-from ..bridge.keys import tr
 from ..core.settings import LOAD_RELIEF
 from ..report.figures import FAINT, INK, LOAD, LOAD_PALE, MARKER_STYLES, PLATE, PLATE_PALE, marked_places
+from ..translation import tr
 from .session import View
 
 try:
@@ -27,24 +27,35 @@ _TEXT = 8.5
 _SETTLE_MS = 400
 """Time after the last change, ms, after which axes that no longer suit the curve are scaled anew."""
 _MARGIN = 0.08
+_SIDE_MARGIN = 0.012
+"""Room before the line's start and beyond its end, as a share of its length: half a marker."""
 _DRAG_PIXELS = 4
+_ZOOM_PER_NOTCH = 1.25
+_MOST_NOTCHES = 4.0
+"""Notches of the wheel that one event may count for: touchpads send many at once."""
+_LEAST_STATIONS = 4
+"""Stations that are in view at the least."""
+_LEAST_SHARE = 1e-3
+"""Share of the whole height that is in view at the least."""
 _DOTS = {
     "fitted": {"color": INK, "markersize": 2.8, "markeredgewidth": 0.0},
     "other": {"markerfacecolor": "white", "markeredgecolor": FAINT, "markeredgewidth": 0.6, "markersize": 2.6},
 }
 
 
-
-
 class ProfileCanvas(FigureCanvasQTAgg):
     """Shows views of one transect.
 
     ``hovered`` gives the distance under the mouse, m, NaN where there is none; ``dragged`` the ends of a stretch, m,
-    and whether it is to be left out (or taken back).
+    and whether it is to be left out (or taken back); ``zoomed`` whether less than the whole profile is in view.
+
+    The wheel zooms about the pointer, distances or, with Ctrl, the heights of the axes under it; the middle button, and
+    the left one while `hand` is set, drag what is seen; a double click shows the whole profile again.
     """
 
     hovered = pyqtSignal(float)
     dragged = pyqtSignal(float, float, bool)
+    zoomed = pyqtSignal(bool)
 
     def __init__(self) -> None:
         super().__init__(Figure(facecolor="white"))
@@ -58,6 +69,11 @@ class ProfileCanvas(FigureCanvasQTAgg):
         self._moving: dict[str, Any] = {}
         self._background: Any = None
         self._from: float | None = None
+        self._hand = False
+        self._held: tuple[Any, float, float] | None = None
+        # Both by "distance" or the name of the axes whose heights they are.
+        self._whole: dict[str, tuple[float, float]] = {}
+        self._windows: dict[str, tuple[float, float]] = {}
         self._settle = QTimer(self)
         self._settle.setSingleShot(True)
         self._settle.setInterval(_SETTLE_MS)
@@ -68,21 +84,25 @@ class ProfileCanvas(FigureCanvasQTAgg):
         self.mpl_connect("figure_leave_event", self._left)
         self.mpl_connect("button_press_event", self._pressed)
         self.mpl_connect("button_release_event", self._released)
+        self.mpl_connect("scroll_event", self._wheeled)
 
     def clear(self) -> None:
-        """Show nothing."""
+        """Show nothing, and what comes next in whole."""
         self._settle.stop()
         self.figure.clear()
         self._view, self._surface, self._moving, self._background = None, None, {}, None
+        self._from, self._held = None, None
+        self._windows.clear()
+        self.zoomed.emit(False)
         self.draw_idle()
 
     def restart(self, view: View, left_out: np.ndarray, fitted: View | None) -> None:
-        """Draw everything anew: another transect, load or selection of stations.
+        """Draw everything anew: another transect, load or selection of stations. What is in view stays.
 
         ``left_out``: stations left out by hand, (n,) bool; ``fitted``: the current fit, whose band and curve stay.
         """
         self._settle.stop()
-        self._from = None
+        self._from, self._held = None, None
         self.figure.clear()
         self._view = view
         self._make_axes(view)
@@ -143,7 +163,8 @@ class ProfileCanvas(FigureCanvasQTAgg):
         self._residual.set_xlabel(tr("distance, km"), fontsize=_TEXT, color=INK, labelpad=1.0)
         self._residual.locator_params(axis="y", nbins=4)
         km = problem.profile.distance / 1e3
-        self._surface.set_xlim(km[0], km[-1])
+        margin = _SIDE_MARGIN * (km[-1] - km[0])
+        self._whole["distance"] = float(km[0] - margin), float(km[-1] + margin)
 
     def _draw_still(self, view: View, left_out: np.ndarray, fitted: View | None) -> list[Any]:
         problem, stations = view.bent.problem, view.bent.stations
@@ -326,16 +347,95 @@ class ProfileCanvas(FigureCanvasQTAgg):
 
     def _scale(self, view: View, fitted: View | None) -> None:
         self._fitted = fitted
-        self._surface.set_ylim(*self._limits(view, fitted))
         reach = self._residual_reach(view)
-        self._residual.set_ylim(-reach, reach)
+        self._whole["surface"] = self._limits(view, fitted)
+        self._whole["residual"] = -reach, reach
+        if self._load is not None and "load" not in self._windows:
+            self._whole["load"] = self._load.get_ylim()
+        self._show_windows()
+
+    def _show_windows(self) -> None:
+        """Bring what is to be in view into view."""
+        shown = {**self._whole, **self._windows}
+        self._surface.set_xlim(*shown["distance"])
+        for name, axes in self._axes_by_name().items():
+            axes.set_ylim(*shown[name])
+
+    def _axes_by_name(self) -> dict[str, Any]:
+        named = {"surface": self._surface, "residual": self._residual, "load": self._load}
+        return {name: axes for name, axes in named.items() if axes is not None}
+
+    def _set_window(self, name: str, low: float, high: float) -> None:
+        """Have a part of the whole in view, moved into it where it reaches beyond; the whole where it is as large."""
+        first, last = self._whole[name]
+        size = high - low
+        if size >= (1.0 - 1e-9) * (last - first):
+            self._windows.pop(name, None)
+            return
+        low = min(max(low, first), last - size)
+        self._windows[name] = low, low + size
+
+    def _windows_changed(self) -> None:
+        self._show_windows()
+        self._background = None
+        self.draw_idle()
+        self.zoomed.emit(bool(self._windows))
+
+    def show_whole(self) -> None:
+        """Show the whole profile in place of a part."""
+        if self._surface is not None and self._windows:
+            self._windows.clear()
+            self._windows_changed()
+
+    @property
+    def hand(self) -> bool:
+        """Whether the left button drags what is seen rather than choosing stations."""
+        return self._hand
+
+    @hand.setter
+    def hand(self, hand: bool) -> None:
+        self._hand = hand
+        self.setCursor(Qt.CursorShape.OpenHandCursor if hand else Qt.CursorShape.ArrowCursor)
+
+    def _wheeled(self, event) -> None:
+        """Zoom about the pointer."""
+        if self._view is None or event.inaxes is None or event.guiEvent is None:
+            return
+        if event.guiEvent.modifiers() & Qt.KeyboardModifier.ControlModifier:
+            name = next(name for name, axes in self._axes_by_name().items() if axes is event.inaxes)
+            at, (low, high) = float(event.ydata), event.inaxes.get_ylim()
+            least = _LEAST_SHARE * (self._whole[name][1] - self._whole[name][0])
+        else:
+            name, at, (low, high) = "distance", float(event.xdata), self._surface.get_xlim()
+            km = self._view.bent.problem.profile.distance / 1e3
+            least = _LEAST_STATIONS * (km[-1] - km[0]) / max(km.size - 1, 1)
+        notches = min(max(event.guiEvent.angleDelta().y() / 120.0, -_MOST_NOTCHES), _MOST_NOTCHES)
+        # Zooming in ends at the least; what is nearer already stays as it is.
+        factor = max(_ZOOM_PER_NOTCH**-notches, min(least / (high - low), 1.0))
+        self._set_window(name, at - factor * (at - low), at + factor * (high - at))
+        self._windows_changed()
+
+    def _drag_view(self, event) -> None:
+        """Let what is seen follow the pointer."""
+        if self._held is None:
+            return
+        axes, x, y = self._held
+        self._held = axes, float(event.x), float(event.y)
+        name = next(name for name, each in self._axes_by_name().items() if each is axes)
+        for along, (low, high), share in (
+            ("distance", axes.get_xlim(), (x - event.x) / axes.bbox.width),
+            (name, axes.get_ylim(), (y - event.y) / axes.bbox.height),
+        ):
+            by = float(share) * (high - low)
+            self._set_window(along, low + by, high + by)
+        self._windows_changed()
 
     def _suits(self, view: View) -> bool:
         """Whether the axes neither cut off the curve or its residuals nor leave most of their room empty."""
         low, high = self._limits(view, self._fitted)
-        bottom, top = self._surface.get_ylim()
+        bottom, top = self._whole["surface"]
         span = top - bottom
-        share = self._residual_reach(view) / self._residual.get_ylim()[1]
+        share = self._residual_reach(view) / self._whole["residual"][1]
         slack = 0.5 * _MARGIN * span
         inside = low >= bottom - slack and high <= top + slack
         return inside and (high - low) > 0.6 * span and 0.4 < share < 1.3
@@ -374,7 +474,12 @@ class ProfileCanvas(FigureCanvasQTAgg):
         self._overlay()
 
     def _moved(self, event) -> None:
-        if self._surface is None or event.inaxes is None or event.xdata is None:
+        if self._surface is None:
+            return
+        if self._held is not None:
+            self._drag_view(event)
+            return
+        if event.inaxes is None or event.xdata is None:
             return
         if self._from is not None:
             low, high = sorted((self._from, float(event.xdata)))
@@ -390,11 +495,21 @@ class ProfileCanvas(FigureCanvasQTAgg):
         self.hovered.emit(float("nan"))
 
     def _pressed(self, event) -> None:
-        if self._surface is None or event.inaxes is None or event.button not in (1, 3):
+        if self._surface is None or event.inaxes is None:
             return
-        self._from, self._from_pixel = float(event.xdata), float(event.x)
+        if event.button == 1 and event.dblclick:
+            self.show_whole()
+        elif event.button == 2 or (event.button == 1 and self._hand):
+            self._held = event.inaxes, float(event.x), float(event.y)
+            self.setCursor(Qt.CursorShape.ClosedHandCursor)
+        elif event.button in (1, 3):
+            self._from, self._from_pixel = float(event.xdata), float(event.x)
 
     def _released(self, event) -> None:
+        if self._held is not None:
+            self._held = None
+            self.hand = self._hand
+            return
         if self._from is None or self._surface is None:
             return
         start, self._from = self._from, None
@@ -402,10 +517,8 @@ class ProfileCanvas(FigureCanvasQTAgg):
         if abs(float(event.x) - self._from_pixel) < _DRAG_PIXELS:
             self._overlay()
             return
-        # Outside the axes a drag ends at the line's end.
-        if event.xdata is not None and event.inaxes is not None:
-            end = float(event.xdata)
-        else:
-            end = float(self._surface.transData.inverted().transform((event.x, event.y))[0])
+        # Beyond the axes a drag ends where they do: stations that are not seen stay as they are.
+        end = float(self._surface.transData.inverted().transform((event.x, event.y))[0])
+        end = min(max(end, self._surface.get_xlim()[0]), self._surface.get_xlim()[1])
         shift = bool(event.guiEvent is not None and event.guiEvent.modifiers() & Qt.KeyboardModifier.ShiftModifier)
         self.dragged.emit(start * 1e3, end * 1e3, not (shift or event.button == 3))

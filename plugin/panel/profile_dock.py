@@ -34,14 +34,15 @@ from qgis.PyQt.QtWidgets import (
     QWidget,
 )
 
-from ..bridge.keys import tr
 from ..bridge.outputs import Track
 from ..core.errors import DownwarpError
 from ..core.result import Estimate
 from ..report.figures import INK, LOAD, missing_package, thickness_density
 from ..report.words import number
+from ..translation import tr, translated
 from .input_page import InputPage
 from .key_form import KeyForm
+from .left_out import add_once, left_out_layer
 from .map_place import MapPlace
 from .plate_page import PlatePage
 from .session import Session, View
@@ -121,9 +122,13 @@ class ProfileDock(QDockWidget):
         self.complaint.setWordWrap(True)
         self.complaint.setStyleSheet(f"border: 1px solid {LOAD}; padding: 3px; color: {INK}; background: #fdf3e7;")
         self.complaint.hide()
-        right.addWidget(self.answer)
+        above = QHBoxLayout()
+        above.setSpacing(0)
+        above.addWidget(self.answer, 1)
+        right.addLayout(above)
         right.addWidget(self.complaint)
         right.addWidget(self._picture(), 1)
+        self._add_view_buttons(above)
         self.reading = QLabel(self._hint())
         self.reading.setObjectName("reading")
         self.reading.setWordWrap(False)
@@ -186,7 +191,7 @@ class ProfileDock(QDockWidget):
         self.dialog_button.setToolTip(
             tr(
                 "Open the algorithm with these values, for all transects of the layer; stations that were left out by "
-                "hand are not passed on"
+                "hand are passed on as polygons in a temporary layer"
             )
         )
         grid.addWidget(self.fit_button, 0, 0)
@@ -203,7 +208,7 @@ class ProfileDock(QDockWidget):
         self.fit_button.clicked.connect(self.start_fit)
         self.cancel_button.clicked.connect(self.cancel)
         self.keep_button.clicked.connect(self.keep)
-        self.dialog_button.clicked.connect(lambda: self.fit_dialog_wanted.emit(self.parameters()))
+        self.dialog_button.clicked.connect(self._want_dialog)
         return grid
 
     def _picture(self) -> QWidget:
@@ -223,8 +228,39 @@ class ProfileDock(QDockWidget):
         self.profile.dragged.connect(self._dragged)
         return self.profile
 
+    def _add_view_buttons(self, row: QHBoxLayout) -> None:
+        """Buttons for what is in view of the profile, where there is one."""
+        if self.profile is None:
+            return
+        self.hand_button, self.whole_button = QToolButton(), QToolButton()
+        self.hand_button.setCheckable(True)
+        self.hand_button.toggled.connect(self._take_hand)
+        self.whole_button.setEnabled(False)
+        self.whole_button.clicked.connect(self.profile.show_whole)
+        self.profile.zoomed.connect(self.whole_button.setEnabled)
+        wheel = tr("The wheel zooms distances, with Ctrl heights.")
+        moving = tr("Move the profile by dragging it; the middle button does so at any time.")
+        whole = tr("Whole profile; a double click on it does the same.")
+        for button, name, icon, words in (
+            (self.hand_button, "hand", "mActionPan.svg", moving),
+            (self.whole_button, "whole", "mActionZoomFullExtent.svg", whole),
+        ):
+            button.setObjectName(name)
+            button.setAutoRaise(True)
+            button.setIcon(QgsApplication.getThemeIcon(icon))
+            button.setToolTip(f"{words} {wheel}")
+            row.addWidget(button)
+
+    def _take_hand(self, taken: bool) -> None:
+        if self.profile is not None:
+            self.profile.hand = taken
+
     def _hint(self) -> str:
-        return tr("Drag over the profile to leave stations out of the fit; with Shift to take them back.")
+        if self.profile is None:
+            return ""
+        if self._session is not None and self._session.left_out.any():
+            return tr("Drag with Shift to take stations back; the wheel zooms.")
+        return tr("Drag to leave stations out of the fit; the wheel zooms, with Ctrl heights.")
 
     # Input
 
@@ -235,6 +271,20 @@ class ProfileDock(QDockWidget):
     def parameters(self) -> dict[str, Any]:
         """The panel's choices as keys of `fittransects`; those at their defaults may be left out."""
         return {**self._more.parameters(), **self.input.parameters(), **self.plate.parameters()}
+
+    def _want_dialog(self) -> None:
+        """Ask for the algorithm's dialog with the panel's keys; stations left out by hand go into FIT_EXCLUDE."""
+        parameters = self.parameters()
+        session, track = self._session, self._track
+        if session is not None and track is not None and session.left_out.any():
+            given = self._project.mapLayer(parameters.get("FIT_EXCLUDE", ""))
+            try:
+                layer = left_out_layer(session, track, self._crs, given)
+            except DownwarpError as error:
+                self._complain(translated(error.message))
+                return
+            parameters["FIT_EXCLUDE"] = add_once(layer, self._project).id()
+        self.fit_dialog_wanted.emit(parameters)
 
     def set_key(self, name: str, value: Any) -> None:
         """Set one of the keys under More."""
@@ -252,7 +302,7 @@ class ProfileDock(QDockWidget):
         try:
             self._session.options = options_of(self.parameters())
         except DownwarpError as error:
-            self._complain(str(error))
+            self._complain(translated(error.message))
             return
         self._options_changed()
 
@@ -275,7 +325,7 @@ class ProfileDock(QDockWidget):
         try:
             source = Source(self.parameters(), feature, self._project)
         except DownwarpError as error:
-            self._complain(str(error))
+            self._complain(translated(error.message))
             return
         self.answer.setText(tr("Reading the transect…"))
 
@@ -371,7 +421,7 @@ class ProfileDock(QDockWidget):
         try:
             self.thickness.set_thickness(session.first_trial().thickness)
         except DownwarpError as error:
-            self._complain(str(error))
+            self._complain(translated(error.message))
         self._refresh()
 
     def _options_changed(self) -> None:
@@ -395,7 +445,7 @@ class ProfileDock(QDockWidget):
         try:
             self._view = session.view(self.plate.trial(self.thickness.thickness, session))
         except DownwarpError as error:
-            self._complain(str(error))
+            self._complain(translated(error.message))
             return
         self._complain("")
         self._draw(session, self._view)
@@ -441,7 +491,7 @@ class ProfileDock(QDockWidget):
             te = tr("{te} km tried").format(te=number(bent.thickness / 1e3))
             remarks = bent.problem.remarks + bent.remarks
         self.answer.setText(tr("{name}: {te}, {rms}").format(name=name, te=te, rms=rms))
-        self.answer.setToolTip("\n".join([self.answer.text(), *remarks]))
+        self.answer.setToolTip("\n".join([self.answer.text(), *map(translated, remarks)]))
 
     def _fitted_words(self, view: View, thickness: Estimate) -> str:
         if thickness.value is None:
@@ -471,6 +521,7 @@ class ProfileDock(QDockWidget):
         if self._session is not None:
             self._session.left_out = np.zeros_like(self._session.left_out)
             self._refresh()
+            self.reading.setText(self._hint())
 
     def _hovered(self, distance: float) -> None:
         self._map.show_place(distance)
@@ -512,7 +563,7 @@ class ProfileDock(QDockWidget):
         try:
             layers = keep(self._view, self._track, self._crs, self._project)
         except DownwarpError as error:
-            self._complain(str(error))
+            self._complain(translated(error.message))
             return
         self.reading.setText(tr("{count} layers were added to the project.").format(count=len(layers)))
 

@@ -19,7 +19,7 @@ from ..core.bend import bend_problem
 from ..core.errors import DownwarpError
 from ..core.fit import REGIONAL_NAMES, complete_sigma, fit_profile, trial_columns
 from ..core.forward import TransectModel
-from ..core.mapped import forward_model
+from ..core.load_shape import forward_model
 from ..core.problem import Observations, Problem, prepare
 from ..core.profile import Profile
 from ..core.result import Bent, FitResult
@@ -216,6 +216,12 @@ class Session:
         kind, at = self.kind, float(problem.breaks[0])
         model = self._model(problem)
         seen = problem.observations()
+        least = model.regional + (len(model.end_forces) if trial.forces is None else 0) + 1
+        if seen.distance.size < least:
+            raise DownwarpError(
+                "{name}: {count} observed stations are left to fit; it takes at least {least}.",
+                name=problem.profile.name, count=seen.distance.size, least=least,
+            )  # fmt: skip
         if trial.forces is None:
             offsets, columns = trial_columns(model, np.array([trial.thickness]), at, seen.distance, seen)
             offset, free, fixed = offsets[0], columns[0], np.zeros(0)
@@ -224,19 +230,15 @@ class Session:
             model = replace(model, shear=kind == BROKEN or bool(shear), moment=kind == BROKEN)
             fixed = np.array([{"end_shear": shear, "end_moment": moment}[name] for name in model.end_forces])
             filled, _ = model.filled(trial.thickness, at, fixed)
-            offset, both = filled.columns(trial.thickness, at, seen.distance)
-            offset, free = offset + both[:, : fixed.size] @ fixed, both[:, fixed.size :]
-        solved = _least_squares(seen, offset, free, problem.profile.name)
+            offsets, columns = filled.columns(np.array([trial.thickness]), at, seen.distance)
+            offset, free = offsets[0] + columns[0, :, : fixed.size] @ fixed, columns[0, :, fixed.size :]
+        solved = _least_squares(seen, offset, free)
         residual = seen.elevation - offset - free @ solved
         return problem, model, np.append(fixed, solved), float(np.sqrt(np.mean(residual**2))), seen
 
 
-def _least_squares(seen: Observations, offset: np.ndarray, columns: np.ndarray, name: str) -> np.ndarray:
+def _least_squares(seen: Observations, offset: np.ndarray, columns: np.ndarray) -> np.ndarray:
     """Coefficients of ``columns`` (m, p) that bring them nearest to what is observed beyond ``offset`` (m,)."""
-    if seen.distance.size <= columns.shape[1]:
-        raise DownwarpError(
-            f"{name}: {seen.distance.size} observed stations are left to fit; it takes at least {columns.shape[1] + 1}."
-        )
     known = complete_sigma(seen.sigma)
     sigma = np.ones(seen.distance.shape) if known is None else known
     scale = np.maximum(np.abs(columns).max(axis=0, initial=0.0), 1e-300)

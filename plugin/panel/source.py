@@ -18,12 +18,13 @@ from qgis.core import (
 
 from ...algorithms.fit_transects import FitTransects
 from ..bridge import keys, rows
-from ..bridge.keys import Key, tr
+from ..bridge.keys import Key
 from ..bridge.options import fit_options
 from ..bridge.outputs import LABELS, Outputs, Track
 from ..bridge.styles import apply_style
 from ..core.errors import DownwarpError
 from ..core.settings import FitOptions
+from ..translation import tr
 from .session import Session, View
 
 SINK = "memory:"
@@ -84,7 +85,7 @@ class Source:
         """Where the stations lie, in the transects' CRS, and a session on what was sampled; for any thread."""
         track, profile = self._item.sample(progress)
         if track is None:
-            raise DownwarpError(f"Transect {profile.name} has no place.")
+            raise DownwarpError("Transect {transect} has no place.", transect=profile.name)
         return track, Session(profile, self._options)
 
 
@@ -115,7 +116,7 @@ def keep(view: View, track: Track, crs: QgsCoordinateReferenceSystem, project: Q
     for output in names:
         layer = context.takeResultLayer(str(outputs.results[output]))
         if layer is None:
-            raise DownwarpError(f"The layer for {output} could not be made.")
+            raise DownwarpError("The layer for {output} could not be made.", output=output)
         layer.setName(tr("{output}, {transect}").format(output=tr(LABELS[output]), transect=name))
         apply_style(layer, output)
         layers.append(layer)

@@ -8,9 +8,9 @@ from typing import Any
 
 from qgis.core import Qgis, QgsMessageLog, QgsTask
 
-from ..bridge.keys import tr
 from ..bridge.threads import ready_pyproj
 from ..core.errors import Cancelled, DownwarpError
+from ..translation import tr, translated
 
 TITLE = "Downwarp"
 
@@ -44,7 +44,7 @@ class Work(QgsTask):
         except Cancelled:
             return False
         except DownwarpError as error:
-            self._sentence = str(error)
+            self._sentence = translated(error.message)
             return False
         except Exception as error:  # whatever it is, it must not be lost in a thread
             self._sentence = tr("Downwarp met an error of its own; the message log has the details: {error}").format(

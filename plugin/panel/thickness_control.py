@@ -17,8 +17,8 @@ from qgis.PyQt.QtWidgets import (
     QWidget,
 )
 
-from ..bridge.keys import tr
 from ..report.figures import FAINT, INK, LOAD, PLATE, PLATE_PALE, Density
+from ..translation import tr
 
 STEPS = 1000
 """Steps of the slider over the search range: at 1 to 100 km half a per cent of the thickness each."""

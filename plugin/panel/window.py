@@ -29,8 +29,8 @@ try:  # Qt 6 has it in QtGui, QGIS 3.22 on Qt 5 in QtWidgets only
 except ImportError:
     from qgis.PyQt.QtWidgets import QAction, QActionGroup
 
-from ..bridge.keys import tr
 from ..bridge.styles import style_drawn
+from ..translation import tr
 from .draw_tool import TransectTool, in_crs
 from .profile_dock import ProfileDock
 from .source import ALGORITHM

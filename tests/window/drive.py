@@ -18,6 +18,7 @@ from qgis.core import (
     NULL,
     Qgis,
     QgsApplication,
+    QgsCoordinateReferenceSystem,
     QgsFeature,
     QgsGeometry,
     QgsPointXY,
@@ -26,10 +27,12 @@ from qgis.core import (
     QgsProcessingFeedback,
     QgsProject,
     QgsRasterLayer,
+    QgsSnappingConfig,
+    QgsTolerance,
     QgsVectorLayer,
 )
 from qgis.PyQt.QtCore import QCoreApplication, QEvent, QPoint, QPointF, Qt, QTimer
-from qgis.PyQt.QtGui import QMouseEvent
+from qgis.PyQt.QtGui import QMouseEvent, QWheelEvent
 from qgis.PyQt.QtTest import QTest
 from qgis.PyQt.QtWidgets import (
     QAbstractButton,
@@ -134,23 +137,62 @@ class User:
         if widget is None and self.dock.isVisible():
             found["layout"][name] = crowded(self.dock) + crowded_figure(self.dock.profile)
 
-    def profile_mouse(self, kind: str, km: float, buttons=Qt.MouseButton.NoButton, button=None) -> None:
-        """A mouse event on the profile at a distance, halfway up the surface axes."""
+    def _on_profile(self, km: float, share: float = 0.5, axes: str = "surface") -> QPointF:
+        """The place on the profile at a distance and a share of the height of axes."""
         profile = self.dock.profile
         x, _ = profile._surface.transData.transform((km, 0.0))
-        box = profile._surface.bbox
+        box = profile._axes_by_name()[axes].bbox
         ratio = profile.devicePixelRatioF()
-        place = QPointF(x / ratio, profile.height() - 0.5 * (box.y0 + box.y1) / ratio)
+        return QPointF(x / ratio, profile.height() - (box.y0 + share * (box.y1 - box.y0)) / ratio)
+
+    def profile_mouse(
+        self, kind: str, km: float, buttons=Qt.MouseButton.NoButton, button=None, share: float = 0.5
+    ) -> None:
+        """A mouse event on the profile at a distance, halfway up the surface axes or at another share of them."""
+        profile, place = self.dock.profile, self._on_profile(km, share)
         types = {
             "press": QMouseEvent.Type.MouseButtonPress,
             "move": QMouseEvent.Type.MouseMove,
             "release": QMouseEvent.Type.MouseButtonRelease,
+            "double": QMouseEvent.Type.MouseButtonDblClick,
         }
         on_screen = QPointF(profile.mapToGlobal(place.toPoint()))
         which = button or Qt.MouseButton.NoButton
         event = QMouseEvent(types[kind], place, on_screen, which, buttons, Qt.KeyboardModifier.NoModifier)
         QApplication.sendEvent(profile, event)
         QApplication.processEvents()
+
+    def wheel(
+        self, km: float, turns: int, share: float = 0.5, axes: str = "surface", control: bool = False, notches: int = 1
+    ) -> float:
+        """Turn the wheel over the profile, by some notches at a time, and return the time that a turn takes to be seen,
+        s."""
+        profile = self.dock.profile
+        place = self._on_profile(km, share, axes)
+        on_screen = QPointF(profile.mapToGlobal(place.toPoint()))
+        modifiers = Qt.KeyboardModifier.ControlModifier if control else Qt.KeyboardModifier.NoModifier
+        start = time.perf_counter()
+        for _ in range(abs(turns)):
+            turn = QPoint(0, 120 * notches if turns > 0 else -120 * notches)
+            event = QWheelEvent(
+                place, on_screen, QPoint(), turn, Qt.MouseButton.NoButton, modifiers, Qt.ScrollPhase.NoScrollPhase,
+                False,
+            )  # fmt: skip
+            QApplication.sendEvent(profile, event)
+            QApplication.processEvents()
+        return (time.perf_counter() - start) / abs(turns)
+
+    def leave_profile(self) -> None:
+        """Take the mouse off the profile."""
+        QApplication.sendEvent(self.dock.profile, QEvent(QEvent.Type.Leave))
+        QApplication.processEvents()
+
+    def view(self) -> list[list[float]]:
+        """Distances, km, and heights of surface and residual that are in view."""
+        profile = self.dock.profile
+        return [
+            list(profile._surface.get_xlim()), list(profile._surface.get_ylim()), list(profile._residual.get_ylim())
+        ]  # fmt: skip
 
     def drag(self, start: float, end: float, button=LEFT) -> None:
         """Drag over the profile between two distances, km."""
@@ -291,20 +333,39 @@ def gives_up(user: User) -> dict:
 
 @step
 def length_is_geodesic(user: User) -> dict:
-    """The live length beside that of the same two places on the ellipsoid (pyproj), in km."""
+    """The live length beside that of the same places on the ellipsoid (pyproj), in km, on maps in three CRSs.
+
+    Two legs of which the second ends at the cursor, in UTM, in degrees and in a Mercator that stretches lengths by half.
+    """
     from pyproj import Geod, Transformer
 
-    user.begin()
-    user.click(60e3, 1.5 * BAND)
-    user.move(600e3, 0.5 * BAND)
-    tool = user.window.tool
-    points = [*tool.vertices, tool._cursor]
-    shown = float(tool._tip.text().split(" km")[0].replace(",", ""))
-    transformer = Transformer.from_crs("EPSG:32727", "EPSG:4326", always_xy=True)
-    longitude, latitude = transformer.transform([p.x() for p in points], [p.y() for p in points])
-    expected = Geod(ellps="WGS84").line_length(longitude, latitude) / 1e3
-    user.key(Qt.Key.Key_Escape)
-    return {"shown": shown, "expected": expected}
+    own, extent = user.canvas.mapSettings().destinationCrs(), user.canvas.extent()
+    tool, lengths = user.window.tool, {}
+    for code in ("EPSG:32727", "EPSG:4326", "EPSG:3857"):
+        user.canvas.setDestinationCrs(QgsCoordinateReferenceSystem(code))
+        spin(0.2)
+        user.begin()
+        room = user.canvas.viewport().rect()
+        for across, down in ((0.1, 0.2), (0.6, 0.3)):
+            place = QPoint(round(across * room.width()), round(down * room.height()))
+            QTest.mouseMove(user.canvas.viewport(), place)
+            QTest.mouseClick(user.canvas.viewport(), LEFT, pos=place)
+        QTest.mouseMove(user.canvas.viewport(), QPoint(round(0.8 * room.width()), round(0.9 * room.height())))
+        QApplication.processEvents()
+        points = [*tool.vertices, tool._cursor]
+        transformer = Transformer.from_crs(code, "EPSG:4326", always_xy=True)
+        longitude, latitude = transformer.transform([p.x() for p in points], [p.y() for p in points])
+        lengths[code] = {
+            "places": len(points),
+            "shown": float(tool._tip.text().split(" km")[0].replace(",", "")),
+            "expected": Geod(ellps="WGS84").line_length(longitude, latitude) / 1e3,
+            "plane": float(np.hypot(*np.diff([[p.x(), p.y()] for p in points], axis=0).T).sum() / 1e3),
+        }
+        user.key(Qt.Key.Key_Escape)
+    user.canvas.setDestinationCrs(own)
+    user.canvas.setExtent(extent)
+    spin(0.2)
+    return lengths
 
 
 @step
@@ -527,6 +588,89 @@ def hovers(user: User) -> dict:
 
 
 @step
+def zooms(user: User) -> dict:
+    """Wheel, middle button, hand, double click and button change what is in view, and nothing else does."""
+    dock, profile, found = user.dock, user.dock.profile, {}
+    whole = user.view()
+    seen = {"whole": whole, "enabled": [dock.whole_button.isEnabled()]}
+    pixel = user._on_profile(150.0)
+    found["redraw"] = user.wheel(150.0, 6)
+    found["moved_pixels"] = abs(user._on_profile(150.0).x() - pixel.x())
+    seen["wheel"] = user.view()
+    seen["enabled"].append(dock.whole_button.isEnabled())
+    height = profile._residual.get_ylim()
+    at = height[0] + 0.4 * (height[1] - height[0])
+    user.wheel(150.0, 1, 0.4, "residual", control=True)
+    seen["heights"] = user.view()
+    height = profile._residual.get_ylim()
+    found["share_after"] = (at - height[0]) / (height[1] - height[0])
+    user.wheel(150.0, 3, 0.9, control=True)
+    seen["both"] = user.view()
+    user.leave_profile()
+    user.shoot("zoomed")
+    user.profile_mouse("move", 160.0)
+    spin(0.1)
+    place = dock._map.marker.center()
+    found["hovered"] = [place.x() - WEST, place.y() - SOUTH, dock.reading.text()]
+    # The curve follows the slider while the view stays.
+    curve, taken = profile._moving["curve"], []
+    before = np.array(curve.get_ydata())
+    position = dock.thickness.slider.value()
+    for change in range(1, 31):
+        start = time.perf_counter()
+        dock.thickness.slider.setValue(position + 4 * change)
+        QApplication.processEvents()
+        taken.append(time.perf_counter() - start)
+    found["curve_moved"] = float(np.nanmax(np.abs(np.array(curve.get_ydata()) - before)))
+    spin(0.8)
+    seen["slid"] = user.view()
+    found["follows"] = {"median": float(np.median(taken)), "largest": float(max(taken))}
+    dock.fit_button.click()
+    need(lambda: dock.session().is_current and not dock._works, "a fit while zoomed")
+    seen["fitted"] = user.view()
+    # Past the edge of what is seen a drag leaves no more out than is seen.
+    right = profile._surface.get_xlim()[1]
+    user.drag(right - 20.0, right + 4.0)
+    distance = dock.session().profile.distance / 1e3
+    out = distance[dock.session().left_out]
+    found["left_out"] = [float(out.min()), float(out.max()), int(out.size)]
+    found["expected_out"] = [right - 20.0, right, int(((distance >= right - 20.0) & (distance <= right)).sum())]
+    seen["masked"] = user.view()
+    user.shoot("zoomed_left_out")
+    dock.restore_button.click()
+    spin(0.3)
+    # The middle button takes what is seen along, the hand does so with the left one, and no station is left out.
+    middle = Qt.MouseButton.MiddleButton
+    width = profile._surface.bbox.width / profile.devicePixelRatioF()
+    for name, button in (("middle", middle), ("hand", LEFT)):
+        dock.hand_button.setChecked(name == "hand")
+        low, high = profile._surface.get_xlim()
+        start, end = user._on_profile(160.0), user._on_profile(160.0 + 0.2 * (high - low))
+        user.profile_mouse("press", 160.0, button, button)
+        by = 0.2 * (high - low)
+        user.profile_mouse("move", 160.0 + by, button)
+        # The view has moved, so that the same pixel is where the drag began.
+        user.profile_mouse("release", 160.0, Qt.MouseButton.NoButton, button)
+        seen[name] = user.view()
+        found[f"{name}_by"] = [by, (end.x() - start.x()) / width]
+    found["after_hand"] = int(dock.session().left_out.sum())
+    dock.hand_button.setChecked(False)
+    user.profile_mouse("double", 160.0, LEFT, LEFT)
+    seen["double"] = user.view()
+    seen["enabled"].append(dock.whole_button.isEnabled())
+    user.wheel(20.0, 10, notches=9)
+    seen["nearest"] = user.view()
+    dock.whole_button.click()
+    QApplication.processEvents()
+    seen["button"] = user.view()
+    user.wheel(20.0, 3)
+    user.wheel(300.0, -4, notches=4)
+    seen["out"] = user.view()
+    found["step"] = float(distance[1] - distance[0])
+    return {**found, "seen": seen}
+
+
+@step
 def leaves_stations_out(user: User) -> dict:
     """Dragging over the profile leaves stations out of the fit; dragging with the right button takes them back."""
     dock = user.dock
@@ -537,14 +681,52 @@ def leaves_stations_out(user: User) -> dict:
     current = dock.session().is_current
     dock.fit_button.click()
     need(lambda: dock.session().is_current, "the fit without them")
+    user.leave_profile()
     user.shoot("left_out")
     in_fit = dock.session().result.best.bent.stations.in_fit
     wrong = int((in_fit & dock.session().left_out).sum())
+    handed = hands_over(user)
     user.drag(300.0, 350.0, RIGHT)
     counts.append(dock.view().count)
     dock.restore_button.click()
     counts.append(dock.view().count)
-    return {"counts": counts, "left": left, "current": current, "wrong": wrong}
+    return {"counts": counts, "left": left, "current": current, "wrong": wrong, **handed}
+
+
+def hands_over(user: User) -> dict:
+    """Open the dialog with all keys twice; what it leaves out, in a run of its own, beside what the panel does."""
+    import processing
+
+    dock, dialogs = user.dock, []
+    before = set(QgsProject.instance().mapLayers())
+    for _ in range(2):
+        dock.dialog_button.click()
+        dialog = user.window._dialogs[-1]
+        need(dialog.isVisible, "the dialog of all keys")
+        dialogs.append(dialog)
+    new = set(QgsProject.instance().mapLayers()) - before
+    parameters = dialogs[-1].createProcessingParameters()
+    user.shoot("all_keys", dialogs[-1])
+    for dialog in dialogs:
+        dialog.close()
+    context = QgsProcessingContext()
+    context.setProject(QgsProject.instance())
+    results = processing.run(
+        "downwarp:fittransects", {**parameters, **dict.fromkeys(("PROFILES", "STATIONS"), "memory:")},
+        context=context, feedback=QgsProcessingFeedback(False),
+    )  # fmt: skip
+    name = dock.session().profile.name
+    theirs = [row for row in table(results["STATIONS"]) if row["transect"] == name]
+    stations = dock.session().result.best.bent.stations
+    profile = next(row for row in table(results["PROFILES"]) if row["transect"] == name)
+    for layer in new:
+        QgsProject.instance().removeMapLayer(layer)
+    return {
+        "excluded": str(parameters["FIT_EXCLUDE"]) in new,
+        "new_layers": len(new),
+        "same_in_fit": [bool(row["in_fit"]) for row in theirs] == stations.in_fit.tolist(),
+        "te_km": [profile["te_km"], dock.session().result.best.thickness.value / 1e3],
+    }
 
 
 @step
@@ -609,6 +791,68 @@ def draws_into_a_layer(user: User) -> dict:
     layer.rollBack()
     user.window.draw_into("")
     return {"editing": editing, "count": count, "undone": undone, "first": [first.x(), first.y()]}
+
+
+@step
+def snaps(user: User) -> dict:
+    """Clicks a few pixels off a vertex: with the project's snapping on they are drawn on it, with it off they are not."""
+    crs = user.canvas.mapSettings().destinationCrs()
+    corners = [(120e3 + 1 / 3, 0.7 * BAND + 1 / 7), (400e3 + 1 / 11, 0.8 * BAND + 1 / 13)]
+    layer = QgsVectorLayer("LineString", "corners", "memory")
+    layer.setCrs(crs)
+    feature = QgsFeature()
+    vertices = [QgsPointXY(WEST + east, SOUTH + north) for east, north in corners]
+    feature.setGeometry(QgsGeometry.fromPolylineXY(vertices))
+    layer.dataProvider().addFeature(feature)
+    QgsProject.instance().addMapLayer(layer)
+    spin(0.5)
+    before, found, tool = QgsProject.instance().snappingConfig(), {}, user.window.tool
+    drawn = {each.name(): each for each in QgsProject.instance().mapLayers().values()}["Drawn transects"]
+    for name, on in (("on", True), ("off", False)):
+        QgsProject.instance().setSnappingConfig(snapping(on))
+        spin(0.2)
+        count = drawn.featureCount()
+        user.begin()
+        for corner in corners:
+            place = user.pixel(*corner) + QPoint(5, -4)
+            if on:
+                # QGIS looks for vertices in the background, and snaps once it has them.
+                need(lambda place=place: snapped(user, place), "the sign that the cursor snaps")
+            QTest.mouseMove(user.canvas.viewport(), place)
+            QTest.mouseClick(user.canvas.viewport(), LEFT, pos=place)
+        length = float(tool._tip.text().split(" km")[0].replace(",", ""))
+        user.click(500e3, 0.2 * BAND, button=RIGHT)
+        need(lambda count=count: drawn.featureCount() == count + 1, "the drawn line")
+        line = max(drawn.getFeatures(), key=lambda each: each.id()).geometry().asPolyline()
+        found[name] = {"drawn": [[p.x(), p.y()] for p in line], "length": length}
+    QgsProject.instance().setSnappingConfig(before)
+    QgsProject.instance().removeMapLayer(layer.id())
+    pixel = user.canvas.mapUnitsPerPixel()
+    return {**found, "corners": [[p.x(), p.y()] for p in vertices], "pixel": pixel}
+
+
+def snapped(user: User, place: QPoint) -> bool:
+    """Whether the tool says that it snaps, after the mouse came to a pixel."""
+    for pixel in (place + QPoint(1, 0), place):
+        QTest.mouseMove(user.canvas.viewport(), pixel)
+        spin(0.05)
+    return user.window.tool._snap.match().isValid()
+
+
+def snapping(on: bool) -> QgsSnappingConfig:
+    """Snapping to vertices of all layers within 12 pixels, or none. Its enums moved to Qgis in 3.26 and 3.32."""
+    modes = Qgis.SnappingMode if hasattr(Qgis, "SnappingMode") else QgsSnappingConfig.SnappingMode
+    units = Qgis.MapToolUnit if hasattr(Qgis, "MapToolUnit") else QgsTolerance.UnitType
+    config = QgsSnappingConfig(QgsProject.instance())
+    config.setEnabled(on)
+    config.setMode(modes.AllLayers)
+    if hasattr(Qgis, "SnappingType"):
+        config.setTypeFlag(Qgis.SnappingTypes(Qgis.SnappingType.Vertex))
+    else:
+        config.setTypeFlag(QgsSnappingConfig.SnappingTypeFlag(QgsSnappingConfig.SnappingTypes.VertexFlag))
+    config.setTolerance(12)
+    config.setUnits(units.Pixels)
+    return config
 
 
 @step

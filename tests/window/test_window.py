@@ -10,6 +10,7 @@ from pathlib import Path
 
 import play
 import pytest
+from pyproj import Geod, Transformer
 
 MISSING = play.missing()
 pytestmark = pytest.mark.skipif(bool(MISSING), reason=f"{' and '.join(MISSING)} not on PATH, which a window needs")
@@ -60,9 +61,31 @@ def test_drawing_can_be_corrected_and_given_up(played):
 
 
 def test_live_length_is_that_on_the_ellipsoid(played):
-    """The length beside the cursor is `pyproj.Geod`'s for the same two places, to the digit that is shown."""
+    """The length beside the cursor is `pyproj.Geod`'s for the same places, to the digit that is shown, whatever the
+    map's CRS: in Mercator and in degrees the length in the map's plane is another by far."""
     found = step(played, "length_is_geodesic")
-    assert found["shown"] == pytest.approx(found["expected"], abs=0.051)
+    for code, length in found.items():
+        assert length["places"] == 3
+        assert length["shown"] == pytest.approx(length["expected"], abs=0.051), code
+    for code in ("EPSG:4326", "EPSG:3857"):
+        assert abs(found[code]["plane"] / found[code]["expected"] - 1) > 0.1
+
+
+def test_vertices_snap_where_the_project_says_so(played):
+    """A click six pixels off a vertex of a layer lands on it to the last bit, and where snapping is off it does not.
+
+    The length shown is that of the snapped line: of the same two places by `pyproj.Geod`, in UTM zone 27 south.
+    """
+    found = step(played, "snaps")
+    assert found["on"]["drawn"] == found["corners"]
+    for drawn, corner in zip(found["off"]["drawn"], found["corners"]):
+        apart = max(abs(drawn[0] - corner[0]), abs(drawn[1] - corner[1])) / found["pixel"]
+        assert 3 < apart < 7
+    for name in ("on", "off"):
+        degrees = Transformer.from_crs("EPSG:32727", "EPSG:4326", always_xy=True)
+        longitude, latitude = degrees.transform(*zip(*found[name]["drawn"]))
+        length = Geod(ellps="WGS84").line_length(longitude, latitude) / 1e3
+        assert found[name]["length"] == pytest.approx(length, abs=0.051)
 
 
 def test_line_drawn_by_clicks_opens_the_panel(played):
@@ -144,6 +167,69 @@ def test_hovering_marks_the_place_on_the_map(played):
     assert values.startswith("observed")
 
 
+def test_wheel_zooms_about_the_pointer(played):
+    """Six notches bring distances 1.25**6 times nearer about the pointer, heights stay; with Ctrl only those of the axes
+    under the pointer change, about it."""
+    found = step(played, "zooms")
+    seen = found["seen"]
+    spans = [after[1] - after[0] for after in (seen["whole"][0], seen["wheel"][0])]
+    assert spans[0] / spans[1] == pytest.approx(1.25**6, rel=1e-9)
+    assert found["moved_pixels"] < 0.01
+    assert seen["wheel"][1:] == seen["whole"][1:]
+    assert seen["heights"][:2] == seen["wheel"][:2]
+    assert seen["heights"][2] != seen["wheel"][2]
+    assert found["share_after"] == pytest.approx(0.4, abs=1e-9)
+    assert seen["both"][0] == seen["heights"][0] and seen["both"][2] == seen["heights"][2]
+    assert seen["both"][1] != seen["heights"][1]
+
+
+def test_view_stays_as_the_curve_moves(played):
+    """Neither the slider nor a fit nor stations left out change what is in view; the curve follows by metres."""
+    found = step(played, "zooms")
+    assert found["curve_moved"] > 1.0
+    for name in ("slid", "fitted", "masked"):
+        assert found["seen"][name] == found["seen"]["both"], name
+
+
+def test_places_are_right_while_zoomed(played):
+    """The mouse at 160 km marks 160 km from the line's start, 60 km from the map's edge; a drag past the edge of the
+    axes leaves out what was seen of the stretch and no more."""
+    found = step(played, "zooms")
+    east, north, words = found["hovered"]
+    assert east == pytest.approx(220e3, abs=2e3)
+    assert north == pytest.approx(1.5 * 260e3, abs=3e3)
+    assert float(words.partition(" km: ")[0]) == pytest.approx(160.0, abs=1.5)
+    low, high, count = found["left_out"]
+    edges = found["expected_out"]
+    assert edges[0] - 0.6 < low and high <= edges[1]
+    assert abs(count - edges[2]) <= 1
+
+
+def test_view_is_dragged(played):
+    """The middle button, and the left one with the hand, move what is seen with the mouse, and leave no station out."""
+    found = step(played, "zooms")
+    before = found["seen"]["masked"]
+    for name in ("middle", "hand"):
+        after = found["seen"][name]
+        by = before[0][0] - after[0][0]
+        # The mouse stands on whole pixels.
+        assert by == pytest.approx(found[f"{name}_by"][0], rel=0.01)
+        assert after[0][1] - after[0][0] == pytest.approx(before[0][1] - before[0][0], rel=1e-9)
+        assert after[2] == before[2]
+        before = after
+    assert found["after_hand"] == 0
+
+
+def test_view_goes_back_to_the_whole(played):
+    """By double click, by the button, and by the wheel, which goes no farther; zooming in ends at four stations."""
+    found = step(played, "zooms")
+    for name in ("double", "button", "out"):
+        assert found["seen"][name][0] == found["seen"]["whole"][0], name
+    assert found["seen"]["enabled"] == [False, True, False]
+    low, high = found["seen"]["nearest"][0]
+    assert high - low == pytest.approx(4 * found["step"], rel=1e-3)
+
+
 def test_dragging_leaves_stations_out(played):
     """The stations of 100 km at 2.5 km spacing are not fitted, half of them come back, then all."""
     found = step(played, "leaves_stations_out")
@@ -154,6 +240,15 @@ def test_dragging_leaves_stations_out(played):
     assert after == before
     assert not found["current"]
     assert found["wrong"] == 0
+
+
+def test_dialog_of_all_keys_leaves_out_the_same_stations(played):
+    """The dialog's own keys hold a new layer, one for both times that it was opened; run with them, the algorithm fits
+    the stations that the panel fits and comes to the same thickness to the last bit."""
+    found = step(played, "leaves_stations_out")
+    assert found["excluded"] and found["new_layers"] == 1
+    assert found["same_in_fit"]
+    assert found["te_km"][0] == found["te_km"][1]
 
 
 def test_other_settings_find_their_plates(played):
