@@ -11,7 +11,7 @@ help:
 	@echo 'make test       lint, types and all tests'
 	@echo 'make matrix     all tests in other releases of QGIS, each in a Debian of its own'
 	@echo 'make fuzz       20,000 hostile runs and 100 that are killed; about an hour'
-	@echo 'make bench      speed of the plate solver beside general libraries'
+	@echo 'make bench      speed beside general libraries, QGIS and GDAL, and of runs of many transects'
 	@echo 'make calibrate  how often the intervals hold the truth'
 	@echo 'make zip        the plugin as QGIS installs it, in build/'
 	@echo 'make clean      remove build/, .venv and caches'
@@ -52,6 +52,7 @@ fuzz: setup-test
 
 bench: setup-test
 	@$(PYTHON) tests/bench/run.py
+	@$(PYTHON) tests/bench/sampling.py
 	@$(PYTHON) tests/bench/many.py
 	@rm -rf build/bench-window && mkdir -p build && $(PYTHON) tests/window/play.py build/bench-window starts draws slides slides_on_many_stations
 

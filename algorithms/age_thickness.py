@@ -9,13 +9,15 @@ from qgis.core import QgsProcessingOutputNumber, QgsProcessingParameterFileDesti
 
 from ..plugin.bridge import age_run, referee_keys
 from ..plugin.bridge.algorithm import DownwarpAlgorithm
-from ..plugin.bridge.keys import Key, required_source, tr
+from ..plugin.bridge.keys import Key, required_source
 from ..plugin.bridge.outputs import Outputs, add_sinks
 from ..plugin.bridge.run_report import inputs_of, versions
 from ..plugin.bridge.runs import run_each
 from ..plugin.bridge.stations import has_places
 from ..plugin.bridge.strength_run import age_reader
+from ..plugin.core.wording import say
 from ..plugin.report.referee import write_age_report
+from ..plugin.translation import tr
 
 
 class AgeThickness(DownwarpAlgorithm):
@@ -45,7 +47,7 @@ class AgeThickness(DownwarpAlgorithm):
 
     def resolve(self, values, parameters, context) -> None:
         self._source = required_source(self, parameters, "INPUT", context)
-        self._age = age_reader(self, values, parameters, context, self._source, "AGE_MYR or AGE_FIELD")
+        self._age = age_reader(self, values, parameters, context, self._source, say("AGE_MYR or AGE_FIELD"))
 
     def carry_out(self, parameters, context, feedback):
         values = self.values(parameters, context)

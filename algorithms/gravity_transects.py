@@ -11,7 +11,7 @@ from qgis.core import QgsProcessingOutputNumber, QgsProcessingParameterFileDesti
 from ..plugin.bridge import gravity_run, referee_keys
 from ..plugin.bridge.algorithm import DownwarpAlgorithm
 from ..plugin.bridge.frames import Frame
-from ..plugin.bridge.keys import required_source, tr
+from ..plugin.bridge.keys import required_source
 from ..plugin.bridge.outputs import Outputs, add_sinks
 from ..plugin.bridge.plate_stations import plate_fields, plate_items
 from ..plugin.bridge.rasters import RasterReader
@@ -19,7 +19,9 @@ from ..plugin.bridge.run_report import inputs_of, versions
 from ..plugin.bridge.runs import run_each
 from ..plugin.bridge.stations import has_places
 from ..plugin.core.errors import DownwarpError
+from ..plugin.core.wording import say
 from ..plugin.report.referee import write_gravity_report
+from ..plugin.translation import tr
 
 NEEDED = ("deflection_m", "te_km", "predicted_m", "dem_m", "load_mpa", "infill_kg_m3")
 
@@ -37,7 +39,7 @@ class GravityTransects(DownwarpAlgorithm):
         self.addParameter(
             QgsProcessingParameterFileDestination("REPORT", tr("Report"), tr("HTML files (*.html)"), None, True, False)
         )
-        for name, label in {**gravity_run.NUMBERS, "TRANSECTS_DONE": "Transects worked on"}.items():
+        for name, label in {**gravity_run.NUMBERS, "TRANSECTS_DONE": say("Transects worked on")}.items():
             self.addOutput(QgsProcessingOutputNumber(name, tr(label)))
 
     def check(self, values) -> None:
@@ -57,14 +59,16 @@ class GravityTransects(DownwarpAlgorithm):
         if values.given("ANOMALY"):
             layer = self.parameterAsRasterLayer(parameters, "ANOMALY", context)
             if layer is None:
-                raise DownwarpError(f"ANOMALY is not a raster that can be read: {parameters.get('ANOMALY')}.")
+                raise DownwarpError(
+                    "ANOMALY is not a raster that can be read: {value}.", value=parameters.get("ANOMALY")
+                )
             reader = RasterReader(layer, values.whole("ANOMALY_BAND"), frame, "ANOMALY")
             return gravity_run.RasterReadings(reader, frame)
         source = required_source(self, parameters, "ANOMALY_POINTS", context)
         for key in ("ANOMALY_FIELD", "ANOMALY_SIGMA"):
             field = values.raw(key)
             if field is not None and source.fields().lookupField(field) < 0:
-                raise DownwarpError(f"{key}: ANOMALY_POINTS has no field {field!r}.")
+                raise DownwarpError("{key}: ANOMALY_POINTS has no field {field!r}.", key=key, field=field)
         field, sigma = values.raw("ANOMALY_FIELD"), values.raw("ANOMALY_SIGMA")
         return gravity_run.PointReadings(source, frame, field, sigma, values.scaled("ANOMALY_REACH", 1e3))
 
@@ -72,7 +76,9 @@ class GravityTransects(DownwarpAlgorithm):
         if self._readings is None:
             return gravity_run.PlateWithGravity(plate, None)
         if track is None:
-            raise DownwarpError(f"{plate.name}: a station has no place, which observed gravity needs.")
+            raise DownwarpError(
+                "{transect}: a station has no place, which observed gravity needs.", transect=plate.name
+            )
         return gravity_run.PlateWithGravity(plate, self._readings.along(plate, track, progress))
 
     def carry_out(self, parameters, context, feedback):

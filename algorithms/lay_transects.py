@@ -8,6 +8,7 @@ from ..plugin.bridge.keys import Key
 from ..plugin.bridge.laying import laid_across, laid_round
 from ..plugin.bridge.outputs import Outputs, add_sinks
 from ..plugin.core.errors import DownwarpError
+from ..plugin.translation import tr
 
 
 class LayTransects(DownwarpAlgorithm):
@@ -48,7 +49,7 @@ class LayTransects(DownwarpAlgorithm):
             for row, geometry in laid:
                 outputs.add("TRANSECTS", row, geometry)
                 if row["remarks"]:
-                    feedback.pushWarning(f"Transect {row['name']}: {row['remarks']}")
+                    feedback.pushWarning(tr("Transect {name}: {remarks}", name=row["name"], remarks=row["remarks"]))
             outputs.flush()
         finally:
             outputs.discard()

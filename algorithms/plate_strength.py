@@ -9,13 +9,15 @@ from qgis.core import QgsProcessingOutputNumber, QgsProcessingParameterFileDesti
 
 from ..plugin.bridge import referee_keys, strength_run
 from ..plugin.bridge.algorithm import DownwarpAlgorithm
-from ..plugin.bridge.keys import required_source, tr
+from ..plugin.bridge.keys import required_source
 from ..plugin.bridge.outputs import Outputs, add_sinks
 from ..plugin.bridge.plate_stations import plate_fields, plate_items
 from ..plugin.bridge.run_report import inputs_of, versions
 from ..plugin.bridge.runs import run_each
 from ..plugin.bridge.stations import has_places
+from ..plugin.core.wording import say
 from ..plugin.report.referee import write_strength_report
+from ..plugin.translation import tr
 
 NEEDED = ("deflection_m", "te_km", "curvature_per_m")
 
@@ -33,7 +35,7 @@ class PlateStrength(DownwarpAlgorithm):
         self.addParameter(
             QgsProcessingParameterFileDestination("REPORT", tr("Report"), tr("HTML files (*.html)"), None, True, False)
         )
-        for name, label in {**strength_run.NUMBERS, "TRANSECTS_DONE": "Transects worked on"}.items():
+        for name, label in {**strength_run.NUMBERS, "TRANSECTS_DONE": say("Transects worked on")}.items():
             self.addOutput(QgsProcessingOutputNumber(name, tr(label)))
 
     def check(self, values) -> None:

@@ -5,6 +5,9 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from qgis.core import Qgis, QgsApplication, QgsMessageLog
+from qgis.PyQt.QtCore import QCoreApplication
+
+from .translation import install, tr
 
 if TYPE_CHECKING:
     from .panel.window import Window
@@ -23,6 +26,8 @@ class DownwarpPlugin:
         self.iface = iface
         self.provider: DownwarpProvider | None = None
         self.window: Window | None = None
+        # Before anything with words is made; Qt keeps it by reference only.
+        self._translator = install()
 
     def initProcessing(self) -> None:
         """Register the provider: all that qgis_process asks of a plugin."""
@@ -56,12 +61,16 @@ class DownwarpPlugin:
         if self.provider is not None:
             QgsApplication.processingRegistry().removeProvider(self.provider)
             self.provider = None
+        if self._translator is not None:
+            QCoreApplication.removeTranslator(self._translator)
+            self._translator = None
 
     def _say_missing(self, package: str) -> None:
-        text = (
-            f"Downwarp needs the Python package {package}, which this QGIS does not have. "
-            f"On Debian and Ubuntu: sudo apt install python3-{package}. "
-            f"Elsewhere, in the shell of this QGIS: python3 -m pip install {package}. Then start QGIS again."
+        text = tr(
+            "Downwarp needs the Python package {package}, which this QGIS does not have. On Debian and Ubuntu: sudo apt "
+            "install python3-{package}. Elsewhere, in the shell of this QGIS: python3 -m pip install {package}. Then "
+            "start QGIS again.",
+            package=package,
         )
         QgsMessageLog.logMessage(text, TITLE, Qgis.MessageLevel.Critical)
         if self.iface is not None:

@@ -14,6 +14,8 @@ from ..core.constants import MYR
 from ..core.cooling import Geotherm
 from ..core.errors import DownwarpError
 from ..core.result import Estimate
+from ..core.wording import say
+from ..translation import joined
 from . import referee_keys
 from .keys import Values
 from .options import KM
@@ -57,14 +59,13 @@ def check_keys(values: Values) -> tuple[Geotherm, tuple[float, ...]]:
     names = ("AGE_MYR", "AGE", "AGE_FIELD")
     given = [name for name in names if values.given(name)]
     if len(given) != 1:
-        words = " and ".join(given) + " are given" if given else f"None of {', '.join(names)} is given"
-        raise DownwarpError(f"{words}; it takes one of them.")
+        referee_keys.refuse_number_of_ages(given, names)
     for name in ("AGE_MYR", "AGE_UNIT_MYR"):
         value = values.number(name)
         if value is not None and value <= 0:
-            raise DownwarpError(f"{name} is {value:g}; it takes a number above 0.")
+            raise DownwarpError("{name} is {value:g}; it takes a number above 0.", name=name, value=value)
     if values.required_number("LOAD_AGE_MYR") < 0:
-        raise DownwarpError(f"LOAD_AGE_MYR is {values.number('LOAD_AGE_MYR'):g}; it takes a number from 0.")
+        raise DownwarpError("LOAD_AGE_MYR is {age:g}; it takes a number from 0.", age=values.number("LOAD_AGE_MYR"))
     return referee_keys.geotherm(values, MYR), referee_keys.isotherms(values)
 
 
@@ -75,7 +76,7 @@ def line_items(source: QgsFeatureSource, values: Values, reader: AgeReader | Non
         fields["NAME_FIELD"] = "transect"
     for key, field in fields.items():
         if field is not None and source.fields().lookupField(field) < 0:
-            raise DownwarpError(f"{key}: INPUT has no field {field!r}.")
+            raise DownwarpError("{key}: INPUT has no field {field!r}.", key=key, field=field)
     if source.fields().lookupField("te_km") < 0:
         raise DownwarpError("INPUT has no field 'te_km'; it takes the PROFILES of fittransects or fitstations.")
     for feature in source.getFeatures():
@@ -89,7 +90,7 @@ def _read(source, feature: QgsFeature, name: str, fields, values: Values, reader
     def number(field: str | None, key: str) -> float | None:
         if field is None or source.fields().lookupField(field) < 0:
             return None
-        value = number_of(feature[field], f"{name}: {key} field {field}")
+        value = number_of(feature[field], say("{name}: {key} field {field}", name=name, key=key, field=field))
         return value if np.isfinite(value) else None
 
     sides = (number(field, "INPUT") for field in FIELDS_OF_PROFILES)
@@ -99,14 +100,16 @@ def _read(source, feature: QgsFeature, name: str, fields, values: Values, reader
         vertices = tuple((v.x(), v.y(), v.z(), v.m()) for v in feature.geometry().vertices())
     if reader is not None:
         if not vertices:
-            raise DownwarpError(f"{name}: the line has no places, which AGE needs; give AGE_MYR or AGE_FIELD.")
+            raise DownwarpError(
+                "{name}: the line has no places, which AGE needs; give AGE_MYR or AGE_FIELD.", name=name
+            )
         x, y = np.array(vertices)[:, :2].T
         age = float(np.nanmedian(reader.at(name, x, y)))
     else:
         stated = number(fields["AGE_FIELD"], "AGE_FIELD") if fields["AGE_FIELD"] else values.number("AGE_MYR")
         if stated is None or stated <= 0:
-            words = "empty" if stated is None else f"{stated:g}"
-            raise DownwarpError(f"{name}: the plate's age is {words}; it takes Myr above 0.")
+            words = say("empty") if stated is None else f"{stated:g}"
+            raise DownwarpError("{name}: the plate's age is {words}; it takes Myr above 0.", name=name, words=words)
         age = stated * MYR
     load_age = number(fields["LOAD_AGE_FIELD"], "LOAD_AGE_FIELD")
     if load_age is None:
@@ -133,7 +136,7 @@ def age_row(check: AgeCheck) -> Row:
         "temperature_c": temperature.value,
         "temperature_low_c": temperature.low,
         "temperature_high_c": temperature.high,
-        "remarks": "; ".join(check.remarks),
+        "remarks": joined(check.remarks),
     }
 
 

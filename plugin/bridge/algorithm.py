@@ -18,8 +18,9 @@ from qgis.core import (
 from qgis.PyQt.QtGui import QIcon
 
 from ..core.errors import Cancelled, DownwarpError
+from ..translation import tr, translated
 from .fields import FIELDS
-from .keys import Key, Values, tr
+from .keys import Key, Values
 from .threads import ready_pyproj
 
 ICON = Path(__file__).resolve().parents[2] / "icons" / "downwarp.svg"
@@ -128,7 +129,7 @@ class DownwarpAlgorithm(QgsProcessingAlgorithm):
             values.check(definition.name() for definition in self.parameterDefinitions())
             self.check(values)
         except DownwarpError as error:
-            return False, str(error)
+            return False, translated(error.message)
         return super().checkParameterValues(parameters, context)
 
     def check(self, values: Values) -> None:
@@ -166,4 +167,4 @@ def _translated_errors() -> Iterator[None]:
     except Cancelled:
         raise QgsProcessingException(tr("Cancelled; nothing was kept.")) from None
     except DownwarpError as error:
-        raise QgsProcessingException(str(error)) from None
+        raise QgsProcessingException(translated(error.message)) from None

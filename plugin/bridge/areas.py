@@ -9,7 +9,7 @@ import shapely.wkb
 from qgis.core import QgsFeatureSource, QgsGeometry, QgsWkbTypes
 
 from ..core.errors import DownwarpError
-from .frames import Frame, full_turn, transformer
+from .frames import Frame, full_turn, transformed, transformer
 
 try:  # shapely 2
     from shapely import contains_xy
@@ -20,6 +20,10 @@ except ImportError:  # shapely 1.8
         from shapely.vectorized import contains
 
         return contains(geometry, x, y)
+
+
+PARTS = 16
+"""Places at which an interval between stations is asked."""
 
 
 class Areas:
@@ -37,22 +41,32 @@ class Areas:
                 continue
             if geometry.type() != QgsWkbTypes.GeometryType.PolygonGeometry:
                 kind = QgsWkbTypes.displayString(geometry.wkbType())
-                raise DownwarpError(f"{label}: feature {feature.id()} is no polygon but {kind}.")
+                raise DownwarpError(
+                    "{label}: feature {feature} is no polygon but {kind}.", label=label, feature=feature.id(), kind=kind
+                )
             if not np.isfinite([(vertex.x(), vertex.y()) for vertex in geometry.vertices()]).all():
-                raise DownwarpError(f"{label}: feature {feature.id()} has a vertex that is not finite.")
+                raise DownwarpError(
+                    "{label}: feature {feature} has a vertex that is not finite.", label=label, feature=feature.id()
+                )
             # shapely knows no curves.
             straight = QgsGeometry(geometry.constGet().segmentize())
             polygons.append(shapely.wkb.loads(bytes(straight.asWkb())).buffer(0))
         if not polygons:
-            raise DownwarpError(f"{label} holds no polygon.")
+            raise DownwarpError("{label} holds no polygon.", label=label)
         self._area = shapely.ops.unary_union(polygons)
 
     def contain(self, longitude: np.ndarray, latitude: np.ndarray) -> np.ndarray:
         """Whether places in degrees lie inside, bool, in the shape of the input."""
-        x, y = self._to_own.transform(longitude, latitude)
-        x, y = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
+        x, y = transformed(self._to_own, longitude, latitude)
         turns = (0.0,) if self._turn is None else (0.0, self._turn, -self._turn)
         inside = np.zeros(x.shape, dtype=bool)
         for turn in turns:
             inside |= np.asarray(contains_xy(self._area, x + turn, y), dtype=bool)
         return inside
+
+    def share(self, longitude: np.ndarray, latitude: np.ndarray) -> np.ndarray:
+        """Share that lies inside of each leg between neighbouring places in degrees (n,), to 1 / `PARTS`, (n - 1,)."""
+        longitude = np.unwrap(longitude, period=360.0)
+        part = (np.arange(PARTS) + 0.5) / PARTS
+        between = [each[:-1, None] + np.diff(each)[:, None] * part for each in (longitude, np.asarray(latitude))]
+        return self.contain(*between).mean(axis=1)

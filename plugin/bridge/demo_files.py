@@ -26,6 +26,7 @@ from qgis.core import (
 from qgis.PyQt.QtCore import QByteArray
 
 from ..core import demo
+from ..core.constants import MILLIGAL
 from ..core.errors import DownwarpError
 from ..core.settings import FORELAND, VOLCANO
 from .destinations import folder_in, replace_file
@@ -34,34 +35,42 @@ from .fields import TYPES
 NODATA = -32768.0
 
 
-def write_demo(folder: Path, noise: float, seed: int) -> list[Path]:
+def write_demo(folder: Path, noise: float, gravity_noise: float, seed: int) -> list[Path]:
     """Write the demo into ``folder`` and return its layers, those to be drawn on top last.
 
-    Files of an earlier demo are replaced once the new ones are complete.
+    Files of an earlier demo are replaced once the new ones are complete. ``noise``: of the relief, m;
+    ``gravity_noise``: m/s2.
     """
     try:
         folder.mkdir(parents=True, exist_ok=True)
         part = folder_in(folder)
     except OSError as error:
-        raise DownwarpError(f"OUTPUT_FOLDER: {folder} cannot be written: {error.strerror}.") from None
+        raise DownwarpError(
+            "OUTPUT_FOLDER: {folder} cannot be written: {reason}.", folder=folder, reason=error.strerror
+        ) from None
     try:
-        layers = _write(part, noise, seed)
+        layers = _write(part, noise, gravity_noise, seed)
         for path in sorted(part.iterdir()):
             replace_file(path, folder / path.name)
     except OSError as error:
-        raise DownwarpError(f"OUTPUT_FOLDER: {folder} cannot be written: {error.strerror}.") from None
+        raise DownwarpError(
+            "OUTPUT_FOLDER: {folder} cannot be written: {reason}.", folder=folder, reason=error.strerror
+        ) from None
     finally:
         shutil.rmtree(part, ignore_errors=True)
     return [folder / layer.name for layer in layers]
 
 
-def _write(folder: Path, noise: float, seed: int) -> list[Path]:
+def _write(folder: Path, noise: float, gravity_noise: float, seed: int) -> list[Path]:
     rng = np.random.default_rng(seed)
     grids = demo.demo_grids(noise, rng)
-    relief, basement = folder / "relief.tif", folder / "basement.tif"
+    relief, basement, gravity = folder / "relief.tif", folder / "basement.tif", folder / "gravity.tif"
     _write_raster(relief, grids.relief)
     _write_raster(basement, grids.basement)
-    layers = [relief, basement]
+    # Noise of its own: relief, basement and picks of a seed do not depend on it.
+    anomaly = demo.demo_gravity(gravity_noise, np.random.default_rng([seed, 1]))
+    _write_raster(gravity, anomaly / MILLIGAL.value)
+    layers = [gravity, relief, basement]
     entries = []
     for scenario in demo.SCENARIOS:
         lines = folder / f"{scenario.name.replace(' ', '_').lower()}.gpkg"
@@ -90,8 +99,18 @@ def _write(folder: Path, noise: float, seed: int) -> list[Path]:
             _write_vector(area, {}, QgsWkbTypes.Type.Polygon, [([], QgsGeometry.fromRect(_ridge_area()))])
             parameters["LOAD_AREA"] = area.name
             layers.append(area)
-        entries.append({"name": scenario.name, "true_te_km": scenario.thickness / 1e3, "parameters": parameters})
-    text = json.dumps({"noise_m": noise, "seed": seed, "scenarios": entries}, indent=2)
+        crust = scenario.crust
+        entries.append({
+            "name": scenario.name,
+            "true_te_km": scenario.thickness / 1e3,
+            "parameters": parameters,
+            "gravity": {
+                "ANOMALY": gravity.name, "RHO_LOAD": crust.load, "RHO_CRUST": crust.crust,
+                "RHO_MANTLE": crust.mantle, "CRUST_KM": crust.thickness / 1e3,
+            },
+        })  # fmt: skip
+    noises = {"noise_m": noise, "noise_mgal": gravity_noise / MILLIGAL.value}
+    text = json.dumps({**noises, "seed": seed, "scenarios": entries}, indent=2)
     (folder / "demo.json").write_text(text + "\n", encoding="utf-8")
     return layers
 
@@ -124,13 +143,13 @@ def _write_raster(path: Path, grid: np.ndarray) -> None:
         Qgis.DataType.Float32, columns, rows, extent, QgsCoordinateReferenceSystem(demo.CRS)
     )
     if provider is None or not provider.isValid():
-        raise DownwarpError(f"OUTPUT_FOLDER: {path.name} cannot be written.")
+        raise DownwarpError("OUTPUT_FOLDER: {file} cannot be written.", file=path.name)
     values = np.where(np.isfinite(grid), grid, NODATA).astype(np.float32)
     block = QgsRasterBlock(Qgis.DataType.Float32, columns, rows)
     block.setData(QByteArray(values.tobytes()))
     provider.setNoDataValue(1, NODATA)
     if not provider.writeBlock(block, 1):
-        raise DownwarpError(f"OUTPUT_FOLDER: {path.name} cannot be written.")
+        raise DownwarpError("OUTPUT_FOLDER: {file} cannot be written.", file=path.name)
 
 
 def _write_vector(path: Path, fields: dict[str, str], kind, features: Iterable[tuple[list, QgsGeometry]]) -> None:
@@ -149,7 +168,9 @@ def _write_vector(path: Path, fields: dict[str, str], kind, features: Iterable[t
         options,
     )
     if writer.hasError() != QgsVectorFileWriter.WriterError.NoError:
-        raise DownwarpError(f"OUTPUT_FOLDER: {path.name} cannot be written: {writer.errorMessage()}.")
+        raise DownwarpError(
+            "OUTPUT_FOLDER: {file} cannot be written: {reason}.", file=path.name, reason=writer.errorMessage()
+        )
     for attributes, geometry in features:
         feature = QgsFeature(layout)
         feature.setAttributes(attributes)

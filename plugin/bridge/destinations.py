@@ -34,6 +34,7 @@ from qgis.core import (
 )
 
 from ..core.errors import DownwarpError
+from ..core.wording import say
 
 FORMATS = {"gpkg": "GPKG", "fgb": "FlatGeobuf", "csv": "CSV", "xlsx": "XLSX"}
 """Drivers of the file formats that hold all names and values of the outputs, by extension; each is a single file."""
@@ -41,10 +42,10 @@ _TABLES = ("csv", "xlsx")
 """Formats of which QGIS writes the fields alone."""
 DEFAULT_EXTENSION = "gpkg"
 _WHY_NOT = {
-    "shp": "a Shapefile cuts field names at 10 characters and numbers at 15 decimals",
-    "dbf": "a dBase table cuts field names at 10 characters and numbers at 15 decimals",
-    "tab": "a MapInfo table turns missing numbers into 0",
-    "geojson": "GeoJSON loses points whose elevation is not known",
+    "shp": say("a Shapefile cuts field names at 10 characters and numbers at 15 decimals"),
+    "dbf": say("a dBase table cuts field names at 10 characters and numbers at 15 decimals"),
+    "tab": say("a MapInfo table turns missing numbers into 0"),
+    "geojson": say("GeoJSON loses points whose elevation is not known"),
 }
 _BESIDE = ("-wal", "-shm", "-journal", ".aux.xml")
 """Endings of the files that SQLite and GDAL keep beside a file; those of an old file would spoil a new one."""
@@ -88,7 +89,9 @@ class Destinations:
             path, table = file
             path = path.resolve()
             if not table and path in taken:
-                raise DownwarpError(f"{name} would overwrite {taken[path]}: both are {path}.")
+                raise DownwarpError(
+                    "{name} would overwrite {other}: both are {path}.", name=name, other=taken[path], path=path
+                )
             taken.setdefault(path, name)
 
     def check(self, name: str, has_geometry: bool) -> None:
@@ -99,19 +102,26 @@ class Destinations:
         path, _ = file
         extension = path.suffix[1:].lower()
         if extension not in FORMATS:
-            why = _WHY_NOT.get(extension, f".{extension} is not among the formats that hold all names and numbers")
+            unknown = say(".{extension} is not among the formats that hold all names and numbers", extension=extension)
+            why = _WHY_NOT.get(extension, unknown)
             kinds = ", ".join(f".{each}" for each in FORMATS)
-            raise DownwarpError(f"{name} cannot be {path.name}: {why}; it takes {kinds}.")
+            raise DownwarpError(
+                "{name} cannot be {file}: {why}; it takes {kinds}.", name=name, file=path.name, why=why, kinds=kinds
+            )
         if extension in _TABLES and name == "TRANSECTS":
-            raise DownwarpError(f"{name} cannot be {path.name}: a table holds no lines.")
+            raise DownwarpError("{name} cannot be {file}: a table holds no lines.", name=name, file=path.name)
         if extension == "fgb" and not has_geometry:
-            raise DownwarpError(f"{name} cannot be {path.name}: FlatGeobuf holds no rows without geometry.")
+            raise DownwarpError(
+                "{name} cannot be {file}: FlatGeobuf holds no rows without geometry.", name=name, file=path.name
+            )
         if not path.parent.is_dir():
-            raise DownwarpError(f"{name} cannot be written: there is no folder {path.parent}.")
+            raise DownwarpError("{name} cannot be written: there is no folder {folder}.", name=name, folder=path.parent)
         if path.exists() and not path.is_file():
-            raise DownwarpError(f"{name} cannot be written: {path} is no file.")
+            raise DownwarpError("{name} cannot be written: {path} is no file.", name=name, path=path)
         if not os.access(path.parent, os.W_OK):
-            raise DownwarpError(f"{name} cannot be written: folder {path.parent} is read-only.")
+            raise DownwarpError(
+                "{name} cannot be written: folder {folder} is read-only.", name=name, folder=path.parent
+            )
 
     def sink(
         self, name: str, fields: QgsFields, kind: QgsWkbTypes.Type, crs: QgsCoordinateReferenceSystem
@@ -124,7 +134,9 @@ class Destinations:
         try:
             folder = folder_in(place.parent)
         except OSError as error:
-            raise DownwarpError(f"{name} cannot be written to {place.parent}: {error.strerror}.") from None
+            raise DownwarpError(
+                "{name} cannot be written to {folder}: {reason}.", name=name, folder=place.parent, reason=error.strerror
+            ) from None
         written = folder / place.name
         options = QgsVectorFileWriter.SaveVectorOptions()
         options.driverName = FORMATS[place.suffix[1:].lower()]
@@ -140,7 +152,12 @@ class Destinations:
         # With the index of a FlatGeobuf its rows would be in another order.
         staged.sink = write("SPATIAL_INDEX=NO") if options.driverName == "FlatGeobuf" else write()
         if staged.sink.hasError() != QgsVectorFileWriter.WriterError.NoError:
-            raise DownwarpError(f"{name} cannot be written to {place}: {staged.sink.errorMessage()}.")
+            raise DownwarpError(
+                "{name} cannot be written to {place}: {reason}.",
+                name=name,
+                place=place,
+                reason=staged.sink.errorMessage(),
+            )
         text = f"{place}|layername={table}" if table else str(place)
         self._load_on_completion(name, text)
         return staged.sink, text
@@ -160,7 +177,11 @@ class Destinations:
                 # Without index and rows it lacks even its head.
                 staged.write()
             if not complete or not staged.written.is_file():
-                raise DownwarpError(f"{staged.output} cannot be written to {staged.place}: is there room for it?")
+                raise DownwarpError(
+                    "{output} cannot be written to {place}: is there room for it?",
+                    output=staged.output,
+                    place=staged.place,
+                )
         for staged in self._staged:
             try:
                 if staged.table:
@@ -169,7 +190,12 @@ class Destinations:
                     replace_file(staged.written, staged.place)
             except (OSError, RuntimeError) as error:
                 reason = getattr(error, "strerror", None) or str(error)
-                raise DownwarpError(f"{staged.output} cannot be written to {staged.place}: {reason}.") from None
+                raise DownwarpError(
+                    "{output} cannot be written to {place}: {reason}.",
+                    output=staged.output,
+                    place=staged.place,
+                    reason=reason,
+                ) from None
         self.discard()
 
     def discard(self) -> None:
@@ -203,7 +229,7 @@ class Destinations:
         if not isinstance(value, str) or value.strip() in ("", QgsProcessing.TEMPORARY_OUTPUT):
             return None
         if "\0" in value:
-            raise DownwarpError(f"{name} is {value!r}, which no file can be called.")
+            raise DownwarpError("{name} is {value!r}, which no file can be called.", name=name, value=value)
         return file_of(value.strip())
 
     def _inputs(self) -> Iterator[tuple[str, Path]]:

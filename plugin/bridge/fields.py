@@ -58,6 +58,12 @@ FIELDS: dict[str, tuple[str, ...]] = {
     "MISFIT": ("transect", "plate", "te_km", "break_km", "rms_m", "relative_likelihood"),
     "TRANSECTS": ("name", "guide", "along_km", "azimuth_deg", "remarks"),
     "CHOICES": ("transect", "choice", "option", "te_km", "te_low_km", "te_high_km", "rms_m"),
+    "ALONG_STRIKE": (
+        "transect", "along_strike_km", "place_km", "setting", "plate", "te_km", "te_low_km", "te_high_km", "break_km",
+        "break_low_km", "break_high_km", "deepest_m", "deepest_km", "node_km", "bulge_m", "bulge_km",
+        "end_shear_n_per_m", "end_shear_low_n_per_m", "end_shear_high_n_per_m", "end_moment_n", "end_moment_low_n",
+        "end_moment_high_n", "rms_m", "young_gpa", "poisson", "gravity_m_s2", "rho_mantle", "rho_infill", "rho_load",
+    ),
     "CHECKS": (
         "transect", "setting", "te_km", "rigidity_nm", "flexural_parameter_km", "strip_deepest_m", "strip_deepest_km",
         "strip_node_km", "strip_bulge_m", "strip_bulge_km", "mapped_deepest_m", "mapped_deepest_km", "mapped_node_km",
@@ -99,6 +105,7 @@ GEOMETRY = {
     "PROFILES": QgsWkbTypes.Type.LineStringZM,
     "STATIONS": QgsWkbTypes.Type.PointZ,
     "MARKERS": QgsWkbTypes.Type.PointZ,
+    "ALONG_STRIKE": QgsWkbTypes.Type.Point,
     "CHECKS": QgsWkbTypes.Type.LineStringZM,
     "CHECK_STATIONS": QgsWkbTypes.Type.PointZ,
     "ANOMALIES": QgsWkbTypes.Type.PointZ,
@@ -124,9 +131,11 @@ def attributes(row: Mapping[str, Any], fields: QgsFields) -> list:
 
 
 def plain(value: Any) -> Any:
-    """A value as QGIS stores it: NULL for None and for numbers that are not finite, no numpy types."""
+    """A value as QGIS stores it: NULL for None and for numbers that are not finite, no numpy types, text as it is."""
     if value is None:
         return NULL
+    if isinstance(value, str):
+        return str(value)  # QGIS would not take what `say` returns
     if hasattr(value, "item"):
         value = value.item()
     if isinstance(value, bool):

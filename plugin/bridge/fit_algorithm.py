@@ -6,6 +6,7 @@ import os
 from collections.abc import Iterable
 from contextlib import closing
 from functools import partial
+from pathlib import Path
 from typing import Any
 
 from qgis.core import QgsCoordinateReferenceSystem, QgsProcessingParameterFileDestination
@@ -15,18 +16,23 @@ from ..core.fit import fit_profile
 from ..core.profile import Profile
 from ..core.result import FitResult
 from ..core.settings import FitOptions
-from .keys import Values, tr
+from ..translation import tr
+from .along_strike import ALONG_STRIKE, AlongStrike
+from .keys import Values
 from .numbers import add_numbers, fit_numbers
 from .options import fit_options
-from .outputs import LABELS, Outputs, add_sinks
-from .run_report import inputs_of, write_run_report
-from .runs import Item, Progress, run_each
+from .outputs import LABELS, Outputs, Track, add_sinks
+from .run_report import inputs_of, staged_report, write_run_report
+from .runs import Finished, Item, Progress, run_each
 from .workers import LEAST_TRANSECTS, FitPool
+
+SINKS = (*LABELS, ALONG_STRIKE)
+"""What a run of the fit writes: what there is of each transect, and all of them along strike."""
 
 
 def add_fit_outputs(algorithm) -> None:
     """Sinks, report and numbers of a fit."""
-    add_sinks(algorithm, tuple(LABELS), required=("PROFILES", "STATIONS"))
+    add_sinks(algorithm, SINKS, required=("PROFILES", "STATIONS"))
     algorithm.addParameter(
         QgsProcessingParameterFileDestination("REPORT", tr("Report"), tr("HTML files (*.html)"), None, True, False)
     )
@@ -37,7 +43,7 @@ def check_fit(values: Values) -> None:
     """Checks on values that need no layer."""
     fit_options(values)
     if not 0 <= values.whole("WORKERS") <= 256:
-        raise DownwarpError(f"WORKERS is {values.whole('WORKERS')}; it takes a whole number from 0 to 256.")
+        raise DownwarpError("WORKERS is {count}; it takes a whole number from 0 to 256.", count=values.whole("WORKERS"))
 
 
 def run_fit(
@@ -56,19 +62,33 @@ def run_fit(
     report = algorithm.parameterAsFileOutput(parameters, "REPORT", context) if parameters.get("REPORT") else ""
     with_choices = bool(parameters.get("CHOICES") or report)
     outputs = Outputs(algorithm, parameters, context, crs, located)
-    arguments = (outputs, tuple(LABELS), items, count, feedback)
-    if count >= LEAST_TRANSECTS:
-        workers = min(values.whole("WORKERS") or (os.cpu_count() or 1), count)
-        with FitPool(workers, options, with_choices) as pool:
-            finished = run_each(*arguments, pool, Outputs.fitted)
-    else:
-        work = partial(_fit, options, with_choices)
-        finished = run_each(*arguments, work, Outputs.fitted)
+    strike = AlongStrike(crs if located else None)
+
+    def write(into: Outputs, result: FitResult, track: Track | None) -> None:
+        into.fitted(result, track)
+        strike.add(result, track)
+
+    def finish(finished: Finished, progress: Progress, page: Path | None) -> None:
+        if ALONG_STRIKE in outputs.results:
+            for row, place in strike.rows():
+                outputs.add(ALONG_STRIKE, row, place)
+        if page is not None:
+            write_run_report(page, finished, strike, inputs_of(algorithm, parameters, context), progress)
+
+    with staged_report(report) as page:
+        work, last = partial(_fit, options, with_choices), partial(finish, page=page)
+        arguments = (outputs, SINKS, items, count, feedback, work, write, last)
+        at_once = min(values.whole("WORKERS") or (os.cpu_count() or 1), count)
+        if count >= LEAST_TRANSECTS and at_once > 1:
+            # This process is one of them.
+            with FitPool(at_once - 1, options, with_choices) as pool:
+                finished = run_each(*arguments, pool)
+        else:
+            finished = run_each(*arguments)
     with closing(finished):
         results = {**outputs.results, **fit_numbers(finished.results())}
-        if report:
-            write_run_report(report, finished, crs if located else None, inputs_of(algorithm, parameters, context))
-            results["REPORT"] = report
+    if report:
+        results["REPORT"] = report
     return results
 
 

@@ -10,6 +10,7 @@ from pyproj import CRS, Geod, Transformer
 from pyproj.exceptions import ProjError
 from qgis.core import QgsCoordinateReferenceSystem
 
+from ..core.by_pyproj import in_shape
 from ..core.errors import DownwarpError
 
 _LONGITUDE_LATITUDE = {
@@ -26,7 +27,9 @@ def pyproj_crs(crs: QgsCoordinateReferenceSystem, what: str) -> CRS:
     try:
         return CRS.from_wkt(crs.toWkt(QgsCoordinateReferenceSystem.WktVariant.WKT_PREFERRED))
     except ProjError:
-        raise DownwarpError(f"{what} has a CRS that cannot be read: {crs.userFriendlyIdentifier()}.") from None
+        raise DownwarpError(
+            "{what} has a CRS that cannot be read: {crs}.", what=what, crs=crs.userFriendlyIdentifier()
+        ) from None
 
 
 def full_turn(crs: CRS) -> float | None:
@@ -39,16 +42,17 @@ def transformer(source: CRS, target: CRS, what: str) -> Transformer:
     try:
         return Transformer.from_crs(source, target, always_xy=True)
     except ProjError:
-        raise DownwarpError(f"{what} cannot be brought from CRS {source.name} to CRS {target.name}.") from None
+        raise DownwarpError(
+            "{what} cannot be brought from CRS {own} to CRS {wanted}.", what=what, own=source.name, wanted=target.name
+        ) from None
 
 
 def transformed(
     between: Transformer, x: np.ndarray, y: np.ndarray, direction: str = "FORWARD"
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Positions through a transformer, in the shape they came in (pyproj 3.5 returns scalars for arrays of one)."""
-    x, y = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
-    to_x, to_y = between.transform(x, y, direction=direction)
-    return np.reshape(to_x, x.shape), np.reshape(to_y, x.shape)
+    """Positions through a transformer, in the shape they came in."""
+    to_x, to_y = in_shape(between.transform, x, y, direction=direction)
+    return to_x, to_y
 
 
 @dataclass(frozen=True)
@@ -66,14 +70,18 @@ class Frame:
     def of(cls, crs: QgsCoordinateReferenceSystem, owner: str) -> Frame:
         """The frame of a QGIS CRS; raises DownwarpError where there is none, or none with an ellipsoid."""
         if not crs.isValid():
-            raise DownwarpError(f"{owner} carries no CRS: give the layer one.")
+            raise DownwarpError("{owner} carries no CRS: give the layer one.", owner=owner)
         plain = pyproj_crs(crs, owner)
         geodetic = plain.geodetic_crs
         # A rotated pole, say, is derived from the frame in which the ellipsoid stands upright.
         while geodetic is not None and geodetic.is_derived:
             geodetic = geodetic.source_crs
         if geodetic is None or plain.is_geocentric:
-            raise DownwarpError(f"{owner} has CRS {plain.name}, which gives no longitude and latitude on an ellipsoid.")
+            raise DownwarpError(
+                "{owner} has CRS {crs}, which gives no longitude and latitude on an ellipsoid.",
+                owner=owner,
+                crs=plain.name,
+            )
         if len(geodetic.axis_info) != 2 or not np.isclose(full_turn(geodetic) or 0.0, 360.0):
             description = geodetic.to_json_dict()
             description.pop("id", None)
@@ -107,7 +115,9 @@ class Frame:
         """
         x, y = transformed(self._from_degrees, longitude, latitude)
         if not (np.isfinite(x).all() and np.isfinite(y).all()):
-            raise DownwarpError(f"{self.owner} has CRS {self.crs.name}, which does not reach all stations.")
+            raise DownwarpError(
+                "{owner} has CRS {crs}, which does not reach all stations.", owner=self.owner, crs=self.crs.name
+            )
         turn = full_turn(self.crs)
         # PROJ leaves longitudes as they are, but brings those of a rotated pole to one turn.
         return (x if turn is None or not self.crs.is_derived else np.unwrap(x, period=turn)), y

@@ -14,7 +14,9 @@ from ..core.gravity_check import GravityCheck, GravityOptions, check_gravity
 from ..core.joint import JointOptions, Readings
 from ..core.stated import PlateStations
 from ..core.transect import Transect
-from .frames import Frame, transformer
+from ..core.wording import say
+from ..translation import joined
+from .frames import Frame, transformed, transformer
 from .keys import Values
 from .options import KM, elastic
 from .outputs import Outputs, Track, place
@@ -33,10 +35,16 @@ def gravity_options(values: Values) -> GravityOptions:
     if values.given("ANOMALY_POINTS") and not values.given("ANOMALY_FIELD"):
         raise DownwarpError("ANOMALY_FIELD is blank; it takes the field with the anomaly of ANOMALY_POINTS.")
     if values.required_number("ANOMALY_REACH") <= 0:
-        raise DownwarpError(f"ANOMALY_REACH is {values.number('ANOMALY_REACH'):g}; it takes a number above 0.")
+        raise DownwarpError(
+            "ANOMALY_REACH is {reach:g}; it takes a number above 0.", reach=values.number("ANOMALY_REACH")
+        )
     fit_from, fit_to = values.scaled("FIT_FROM", KM), values.scaled("FIT_TO", KM)
     if fit_from is not None and fit_to is not None and fit_from >= fit_to:
-        raise DownwarpError(f"FIT_FROM ({fit_from / KM:g} km) must be below FIT_TO ({fit_to / KM:g} km).")
+        raise DownwarpError(
+            "FIT_FROM ({fit_from:g} km) must be below FIT_TO ({fit_to:g} km).",
+            fit_from=fit_from / KM,
+            fit_to=fit_to / KM,
+        )
     crust = Crust(
         load=values.required_number("RHO_LOAD"),
         mantle=values.required_number("RHO_MANTLE"),
@@ -47,7 +55,9 @@ def gravity_options(values: Values) -> GravityOptions:
     )
     if crust.load <= crust.water:
         raise DownwarpError(
-            f"RHO_LOAD ({crust.load:g} kg/m3) must exceed RHO_WATER ({crust.water:g} kg/m3), which it displaces."
+            "RHO_LOAD ({load:g} kg/m3) must exceed RHO_WATER ({water:g} kg/m3), which it displaces.",
+            load=crust.load,
+            water=crust.water,
         )
     before = values.enum("BEFORE")
     return GravityOptions(
@@ -82,7 +92,7 @@ class RasterReadings:
         longitude, latitude = self._frame.to_degrees(track.x, track.y)
         value = self._reader.sample(longitude, latitude, progress)
         if not np.isfinite(value).any():
-            raise DownwarpError(f"{plate.name}: ANOMALY has no data anywhere along the line.")
+            raise DownwarpError("{transect}: ANOMALY has no data anywhere along the line.", transect=plate.name)
         cell = self._reader.cell_size_m(longitude, latitude)
         return Readings(track.distance, value * MILLIGAL.value, None, float(np.nanmedian(cell)))
 
@@ -97,13 +107,24 @@ class PointReadings:
             point = next(feature.geometry().vertices(), None) if feature.hasGeometry() else None
             if point is None:
                 continue
-            spread = number_of(feature[sigma], f"ANOMALY_SIGMA field {sigma}") if sigma else float("nan")
-            rows.append((point.x(), point.y(), number_of(feature[field], f"ANOMALY_FIELD field {field}"), spread))
+            spread = (
+                number_of(feature[sigma], say("{key} field {field}", key="ANOMALY_SIGMA", field=sigma))
+                if sigma
+                else float("nan")
+            )
+            rows.append(
+                (
+                    point.x(),
+                    point.y(),
+                    number_of(feature[field], say("{key} field {field}", key="ANOMALY_FIELD", field=field)),
+                    spread,
+                )
+            )
         if not rows:
             raise DownwarpError("ANOMALY_POINTS holds no point.")
         x, y, value, spread = np.array(rows).T
         own = Frame.of(source.sourceCrs(), "ANOMALY_POINTS")
-        self._longitude, self._latitude = transformer(own.crs, frame.geographic, "ANOMALY_POINTS").transform(x, y)
+        self._longitude, self._latitude = transformed(transformer(own.crs, frame.geographic, "ANOMALY_POINTS"), x, y)
         self._value, self._sigma = value * MILLIGAL.value, spread * MILLIGAL.value
         self._frame, self._reach = frame, reach
 
@@ -114,7 +135,9 @@ class PointReadings:
         along, across = transect.project(self._longitude, self._latitude)
         near = (np.abs(across) <= self._reach) & (along >= 0) & (along <= transect.length) & np.isfinite(self._value)
         if not near.any():
-            raise DownwarpError(f"{plate.name}: no point of ANOMALY_POINTS lies within ANOMALY_REACH of the line.")
+            raise DownwarpError(
+                "{transect}: no point of ANOMALY_POINTS lies within ANOMALY_REACH of the line.", transect=plate.name
+            )
         # Whole metres: points closer than that have one foot.
         place, index = np.unique(np.round(along[near] + track.distance[0]), return_inverse=True)
         count = np.bincount(index)
@@ -161,12 +184,12 @@ def station_rows(check: GravityCheck) -> list[Row]:
 
 def evidence_rows(check: GravityCheck) -> list[Row]:
     """EVIDENCE values: the plate as given, then what surface, gravity and both say."""
-    remarks = "; ".join(check.remarks)
+    remarks = joined(check.remarks)
     thickness = check.plate.thickness[check.plate.on_plate]
     known = thickness[np.isfinite(thickness)]
     rows: list[Row] = [{
         "transect": check.name,
-        "source": "plate as given",
+        "source": say("plate as given"),
         "te_km": float(np.median(known)) / KM if known.size else None,
         "rho_load": check.crust.load if check.section.under_load.any() else None,
         "rms_mgal": _in_mgal(check.rms),
@@ -247,10 +270,10 @@ def gravity_numbers(checks) -> dict[str, float | None]:
 
 
 NUMBERS = {
-    "RMS_MGAL": "Root mean square residual of gravity, mGal",
-    "TE_KM": "Elastic thickness from surface and gravity, km",
-    "TE_LOW_KM": "Its lower bound, km",
-    "TE_HIGH_KM": "Its upper bound, km",
-    "LOAD_DENSITY": "Density of the load from surface and gravity, kg/m3",
+    "RMS_MGAL": say("Root mean square residual of gravity, mGal"),
+    "TE_KM": say("Elastic thickness from surface and gravity, km"),
+    "TE_LOW_KM": say("Its lower bound, km"),
+    "TE_HIGH_KM": say("Its upper bound, km"),
+    "LOAD_DENSITY": say("Density of the load from surface and gravity, kg/m3"),
 }
 """Numbers that a run returns, beside TRANSECTS_DONE."""

@@ -27,14 +27,10 @@ from qgis.core import (
     QgsProcessingParameterString,
     QgsProperty,
 )
-from qgis.PyQt.QtCore import QCoreApplication
 
 from ..core.errors import DownwarpError
-
-
-def tr(text: str) -> str:
-    """Translated text."""
-    return QCoreApplication.translate("Downwarp", text)
+from ..core.wording import listed, say
+from ..translation import tr
 
 
 @dataclass(frozen=True)
@@ -90,13 +86,13 @@ class Key:
 
 
 SETTING_OPTIONS = (
-    "Volcanic load on the seafloor",
-    "Trench and outer rise",
-    "Foreland basin",
-    "Load removed (ice, lake, erosion)",
-    "None of these",
+    say("Volcanic load on the seafloor"),
+    say("Trench and outer rise"),
+    say("Foreland basin"),
+    say("Load removed (ice, lake, erosion)"),
+    say("None of these"),
 )
-SUPPORTS = ("Continues", "Broken", "Pinned", "Clamped")
+SUPPORTS = (say("Continues"), say("Broken"), say("Pinned"), say("Clamped"))
 
 LINES = (
     Key("TRANSECTS", "lines", "Transects, drawn from the load outwards", required=True),
@@ -164,7 +160,7 @@ LOAD_SHAPE = (
         ("Strip: as on the line, all along strike", "As mapped"), advanced=True,
     ),
 )  # fmt: skip
-STRIP_WARNING = (Key("CHECK_STRIP", "flag", "Check the strip where the plate is continuous", False, advanced=True),)
+STRIP_WARNING = (Key("CHECK_STRIP", "flag", "Check the strip where the plate is continuous", True, advanced=True),)
 ZONES = (
     Key("TE_ZONES", "whole", "Zones of elastic thickness: 1, or 2 for a plate that weakens towards its break", 1,
         advanced=True),
@@ -259,7 +255,7 @@ def required_source(algorithm, parameters: dict[str, Any], name: str, context) -
     """The features that a key names; raises DownwarpError where they cannot be read."""
     source = algorithm.parameterAsSource(parameters, name, context)
     if source is None:
-        raise DownwarpError(f"{name} is not a layer that can be read: {parameters.get(name)}.")
+        raise DownwarpError("{name} is not a layer that can be read: {value}.", name=name, value=parameters.get(name))
     return source
 
 
@@ -289,22 +285,24 @@ class Values:
         value = self.raw(name)
         if value is None:
             return self.keys[name].default
-        wanted = "a whole number" if self.keys[name].kind == "whole" else "a number"
+        wanted = say("a whole number") if self.keys[name].kind == "whole" else say("a number")
         try:
             if isinstance(value, bool):
                 raise ValueError
             result = float(value)
         except (TypeError, ValueError):
-            raise DownwarpError(f"{name} is {value!r}; it takes {wanted}.") from None
+            raise DownwarpError(
+                "{name} is {value!r}; it takes {wanted}.", name=name, value=value, wanted=wanted
+            ) from None
         if not math.isfinite(result) or (self.keys[name].kind == "whole" and result != int(result)):
-            raise DownwarpError(f"{name} is {value}; it takes {wanted}.")
+            raise DownwarpError("{name} is {value}; it takes {wanted}.", name=name, value=value, wanted=wanted)
         return result
 
     def required_number(self, name: str) -> float:
         """A finite number; an error where the key is blank and has no default."""
         value = self.number(name)
         if value is None:
-            raise DownwarpError(f"{name} is blank; it takes a number.")
+            raise DownwarpError("{name} is blank; it takes a number.", name=name)
         return value
 
     def scaled(self, name: str, unit: float) -> float | None:
@@ -329,8 +327,12 @@ class Values:
         except (TypeError, ValueError, OverflowError):
             result = -1
         if result not in range(len(key.options)):
-            choices = ", ".join(f"{place} {option}" for place, option in enumerate(key.options))
-            raise DownwarpError(f"{name} is {value!r}; it takes one of: {choices}.")
+            options = [
+                say("{place} {option}", place=place, option=say(option)) for place, option in enumerate(key.options)
+            ]
+            raise DownwarpError(
+                "{name} is {value!r}; it takes one of: {options}.", name=name, value=value, options=listed(options)
+            )
         return result
 
     def flag(self, name: str) -> bool:
@@ -343,13 +345,13 @@ class Values:
             return True
         if text in ("false", "0", "no", "0.0"):
             return False
-        raise DownwarpError(f"{name} is {value!r}; it takes true or false.")
+        raise DownwarpError("{name} is {value!r}; it takes true or false.", name=name, value=value)
 
     def field(self, name: str) -> str | None:
         """The name of a field; None where blank."""
         value = self.raw(name)
         if value is not None and not isinstance(value, str):
-            raise DownwarpError(f"{name} is {value!r}; it takes the name of a field.")
+            raise DownwarpError("{name} is {value!r}; it takes the name of a field.", name=name, value=value)
         return value
 
     def check(self, known: Iterable[str]) -> None:
@@ -358,8 +360,11 @@ class Values:
         for name in self.parameters:
             if name not in known:
                 near = difflib.get_close_matches(name, known, n=1)
-                hint = f"; did you mean {near[0]}?" if near else "."
-                raise DownwarpError(f"{name} is not a key of this algorithm{hint}")
+                if near:
+                    raise DownwarpError(
+                        "{name} is not a key of this algorithm; did you mean {near}?", name=name, near=near[0]
+                    )
+                raise DownwarpError("{name} is not a key of this algorithm.", name=name)
         readers = {
             "number": self.number,
             "whole": self.number,

@@ -8,6 +8,7 @@ from qgis.core import QgsFeatureSource, QgsGeometry
 
 from ..core.errors import DownwarpError
 from ..core.lay import LaidTransect, lay_across, lay_round
+from ..translation import translated
 from . import lines
 from .frames import Frame
 from .keys import Values
@@ -38,7 +39,7 @@ def laid_round(source: QgsFeatureSource, values: Values) -> Iterator[tuple[Row, 
     for feature in source.getFeatures():
         point = next(feature.geometry().vertices(), None)
         if point is None:
-            raise DownwarpError(f"CENTRES: feature {feature.id()} has no geometry.")
+            raise DownwarpError("CENTRES: feature {feature} has no geometry.", feature=feature.id())
         longitude, latitude = frame.to_degrees(point.x(), point.y())
         laid = lay_round(
             float(longitude),
@@ -57,6 +58,6 @@ def _features(laid: tuple[LaidTransect, ...], guide: str, frame: Frame) -> Itera
             "guide": guide,
             "along_km": None if transect.along is None else transect.along / KM,
             "azimuth_deg": transect.azimuth,
-            "remarks": transect.remark,
+            "remarks": translated(transect.remark),
         }
         yield row, lines.line(frame, *transect.vertices.T)

@@ -33,9 +33,11 @@ def transect(feature: QgsFeature, frame: Frame, name: str) -> Transect:
 def _parts(geometry: QgsGeometry, name: str) -> list[np.ndarray]:
     """Vertices in the layer's CRS, (n, 2), of the parts of a line geometry that have any."""
     if geometry.isNull() or geometry.isEmpty():
-        raise DownwarpError(f"Transect {name} has no geometry.")
+        raise DownwarpError("Transect {name} has no geometry.", name=name)
     if geometry.type() != QgsWkbTypes.GeometryType.LineGeometry:
-        raise DownwarpError(f"Transect {name} is no line but {QgsWkbTypes.displayString(geometry.wkbType())}.")
+        raise DownwarpError(
+            "Transect {name} is no line but {kind}.", name=name, kind=QgsWkbTypes.displayString(geometry.wkbType())
+        )
     straight = QgsGeometry(geometry.constGet().segmentize())
     return [
         np.array([(vertex.x(), vertex.y()) for vertex in part.vertices()])
@@ -46,10 +48,12 @@ def _parts(geometry: QgsGeometry, name: str) -> list[np.ndarray]:
 
 def _in_degrees(part: np.ndarray, frame: Frame, name: str) -> np.ndarray:
     if not np.isfinite(part).all():
-        raise DownwarpError(f"Transect {name} has a vertex that is not finite.")
+        raise DownwarpError("Transect {name} has a vertex that is not finite.", name=name)
     vertices = np.column_stack(frame.to_degrees(*part.T))
     if not np.isfinite(vertices).all():
-        raise DownwarpError(f"Transect {name} has a vertex that lies outside what CRS {frame.crs.name} can express.")
+        raise DownwarpError(
+            "Transect {name} has a vertex that lies outside what CRS {crs} can express.", name=name, crs=frame.crs.name
+        )
     return vertices
 
 
@@ -65,7 +69,9 @@ def _joined(parts: list[np.ndarray], name: str) -> np.ndarray:
                 break
         else:
             raise DownwarpError(
-                f"Transect {name} has {len(parts)} parts that do not join end to end; draw it as one line."
+                "Transect {name} has {count} parts that do not join end to end; draw it as one line.",
+                name=name,
+                count=len(parts),
             )
     return np.concatenate(chain)
 

@@ -9,14 +9,15 @@ import numpy as np
 from qgis.core import QgsProcessingOutputNumber
 
 from ..core.result import FitResult
-from .keys import tr
+from ..core.wording import say
+from ..translation import tr
 
 LABELS = {
-    "TE_KM": "Elastic thickness, km",
-    "TE_LOW_KM": "Elastic thickness, lower bound, km",
-    "TE_HIGH_KM": "Elastic thickness, upper bound, km",
-    "RMS_M": "Root mean square residual, m",
-    "TRANSECTS_FITTED": "Transects fitted",
+    "TE_KM": say("Elastic thickness, km"),
+    "TE_LOW_KM": say("Elastic thickness, lower bound, km"),
+    "TE_HIGH_KM": say("Elastic thickness, upper bound, km"),
+    "RMS_M": say("Root mean square residual, m"),
+    "TRANSECTS_FITTED": say("Transects fitted"),
 }
 
 

@@ -7,6 +7,7 @@ from qgis.core import QgsFeature, QgsFeatureSource
 from ..core.elastic import Elastic
 from ..core.errors import DownwarpError
 from ..core.settings import BOTH, FORCES_NONE, MAPPED, STRIP, FitOptions
+from ..core.wording import say
 from .keys import Values
 from .picks import number_of
 from .sampling import LEAST_THICKNESS, MOST_THICKNESS
@@ -74,7 +75,7 @@ def bend_options(values: Values, thickness: float | None = None) -> FitOptions:
     """
     plate = values.enum("PLATE")
     if plate >= BOTH:
-        raise DownwarpError(f"PLATE is {plate}; it takes 0 (continuous) or 1 (broken).")
+        raise DownwarpError("PLATE is {plate}; it takes 0 (continuous) or 1 (broken).", plate=plate)
     if thickness is None:
         thickness = stated_thickness(values)
     if values.given("TE_FIELD") and values.given("TE_RASTER"):
@@ -97,15 +98,19 @@ def stated_thickness(values: Values, feature: QgsFeature | None = None, name: st
     """Elastic thickness, m, from TE_FIELD of a feature where that key is given, else TE_KM."""
     field = values.raw("TE_FIELD")
     if field is None or feature is None:
-        thickness, what = values.required_number("TE_KM"), "TE_KM"
+        thickness, what = values.required_number("TE_KM"), say("TE_KM")
     else:
-        what = f"Transect {name}: TE_FIELD {field}"
+        what = say("Transect {name}: TE_FIELD {field}", name=name, field=field)
         thickness = number_of(feature[field], what)
         if thickness != thickness:
-            raise DownwarpError(f"{what} is NULL: there is no plate.")
+            raise DownwarpError("{what} is NULL: there is no plate.", what=what)
     if not LEAST_THICKNESS <= thickness * KM <= MOST_THICKNESS:
         raise DownwarpError(
-            f"{what} is {thickness:g}; it takes a number from {LEAST_THICKNESS / KM:g} to {MOST_THICKNESS / KM:g}."
+            "{what} is {thickness:g}; it takes a number from {least:g} to {most:g}.",
+            what=what,
+            thickness=thickness,
+            least=LEAST_THICKNESS / KM,
+            most=MOST_THICKNESS / KM,
         )
     return thickness * KM
 
@@ -114,4 +119,4 @@ def check_thickness_field(values: Values, source: QgsFeatureSource) -> None:
     """Raise DownwarpError where TE_FIELD is no field of the transects."""
     field = values.raw("TE_FIELD")
     if field is not None and source.fields().lookupField(field) < 0:
-        raise DownwarpError(f"TE_FIELD: TRANSECTS has no field {field!r}.")
+        raise DownwarpError("TE_FIELD: TRANSECTS has no field {field!r}.", field=field)

@@ -21,20 +21,35 @@ from qgis.core import (
 
 from ..core.result import Bent, FitResult
 from ..core.strip_check import StripCheck
+from ..core.wording import say
+from ..translation import tr, translated
 from . import rows, strip_rows
 from .destinations import Destinations
 from .fields import FIELDS, GEOMETRY, attributes, layer_fields
-from .keys import tr
 from .styles import style_on_load
 
 LABELS = {
-    "PROFILES": "Profiles",
-    "STATIONS": "Stations",
-    "MARKERS": "Markers",
-    "PARAMETERS": "Parameters",
-    "MISFIT": "Misfit",
-    "CHOICES": "Choices",
+    "PROFILES": say("Profiles"),
+    "STATIONS": say("Stations"),
+    "MARKERS": say("Markers"),
+    "PARAMETERS": say("Parameters"),
+    "MISFIT": say("Misfit"),
+    "CHOICES": say("Choices"),
 }
+OTHER_LABELS = {
+    "TRANSECTS": say("Transects"),
+    "ALONG_STRIKE": say("Along strike"),
+    "CHECKS": say("Checks"),
+    "CHECK_STATIONS": say("Check stations"),
+    "ANOMALIES": say("Anomalies"),
+    "EVIDENCE": say("Evidence"),
+    "VERDICTS": say("Verdicts"),
+    "ENVELOPES": say("Envelopes"),
+    "MOMENTS": say("Moments"),
+    "AGES": say("Ages"),
+    "ISOTHERM_DEPTHS": say("Isotherm depths"),
+}
+"""Those of outputs that the fit does not have."""
 
 
 @dataclass(frozen=True)
@@ -70,14 +85,15 @@ def add_sinks(algorithm, names: tuple[str, ...], required: tuple[str, ...]) -> N
         "ANOMALIES": QgsProcessing.SourceType.TypeVectorPoint,
         "VERDICTS": QgsProcessing.SourceType.TypeVectorPoint,
         "AGES": QgsProcessing.SourceType.TypeVectorLine,
+        "ALONG_STRIKE": QgsProcessing.SourceType.TypeVectorPoint,
     }
     for name in names:
         kind = types.get(name, QgsProcessing.SourceType.TypeVector)
         optional = name not in required
-        create_by_default = name in types
+        create_by_default = name in types and name != "ALONG_STRIKE"
         algorithm.addParameter(
             QgsProcessingParameterFeatureSink(
-                name, tr(LABELS.get(name, name.replace("_", " ").capitalize())), kind, None, optional, create_by_default
+                name, tr({**LABELS, **OTHER_LABELS}[name]), kind, None, optional, create_by_default
             )
         )
 
@@ -143,7 +159,7 @@ class Outputs:
         if geometry is not None and self._located:
             feature.setGeometry(geometry)
         if not sink.addFeature(feature, QgsFeatureSink.Flag.FastInsert):
-            raise QgsProcessingException(tr("{name} cannot be written: {why}").format(name=name, why=sink.lastError()))
+            raise QgsProcessingException(tr("{name} cannot be written: {why}", name=name, why=sink.lastError()))
 
     def bent(self, bent: Bent, row: rows.Row, track: Track | None, thickness_known: bool = True) -> None:
         """Write PROFILES, STATIONS and MARKERS of a bent plate."""
@@ -179,7 +195,7 @@ class Outputs:
 
     def failed(self, sink: str, name: str, why: str) -> None:
         """Write a transect that could not be worked on: its name and the reason."""
-        self.add(sink, {"transect": name, "remarks": why})
+        self.add(sink, {"transect": name, "remarks": translated(why)})
 
     def _line(self, track: Track | None, z: np.ndarray) -> QgsGeometry | None:
         """The line over the stations that carry the plate, with Z the predicted surface and M the distance in km."""
@@ -204,8 +220,10 @@ class Outputs:
         # A file is closed once nobody holds its sink.
         sink = None
         self._sinks.clear()
-        words = tr("{name} is a FlatGeobuf, which holds no rows without geometry: {count} left out")
-        left_out = [words.format(name=name, count=count) for name, count in self._left_out.items()]
+        left_out = [
+            tr("{name} is a FlatGeobuf, which holds no rows without geometry: {count} left out", name=name, count=count)
+            for name, count in self._left_out.items()
+        ]
         self._destinations.place()
         return left_out
 

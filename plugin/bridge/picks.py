@@ -8,7 +8,8 @@ from qgis.core import NULL, QgsFeatureSource
 from ..core.errors import DownwarpError
 from ..core.profile import Picks
 from ..core.transect import Transect
-from .frames import Frame, transformer
+from ..core.wording import say
+from .frames import Frame, transformed, transformer
 
 
 def number_of(value, what: str) -> float:
@@ -18,7 +19,7 @@ def number_of(value, what: str) -> float:
     try:
         return float(value)
     except (TypeError, ValueError):
-        raise DownwarpError(f"{what} holds {value!r}; it takes numbers.") from None
+        raise DownwarpError("{what} holds {value!r}; it takes numbers.", what=what, value=value) from None
 
 
 class PickReader:
@@ -31,16 +32,22 @@ class PickReader:
             geometry = feature.geometry()
             if geometry.isNull() or geometry.isEmpty():
                 continue
-            spread = number_of(feature[sigma], f"PICK_SIGMA field {sigma}") if sigma else float("nan")
-            height = number_of(feature[elevation], f"PICK_ELEVATION field {elevation}")
+            spread = (
+                number_of(feature[sigma], say("{key} field {field}", key="PICK_SIGMA", field=sigma))
+                if sigma
+                else float("nan")
+            )
+            height = number_of(feature[elevation], say("{key} field {field}", key="PICK_ELEVATION", field=elevation))
             rows += [(point.x(), point.y(), height, spread) for point in geometry.vertices()]
         if not rows:
             raise DownwarpError("PICKS holds no point.")
         x, y, self._elevation, self._sigma = np.array(rows).T
         if (self._sigma < 0).any():
-            raise DownwarpError(f"PICK_SIGMA field {sigma} holds a number below 0; a standard deviation is above it.")
+            raise DownwarpError(
+                "PICK_SIGMA field {sigma} holds a number below 0; a standard deviation is above it.", sigma=sigma
+            )
         own = Frame.of(source.sourceCrs(), "PICKS")
-        self._longitude, self._latitude = transformer(own.crs, frame.geographic, "PICKS").transform(x, y)
+        self._longitude, self._latitude = transformed(transformer(own.crs, frame.geographic, "PICKS"), x, y)
         self._reach = reach
 
     def on(self, transect: Transect) -> Picks:

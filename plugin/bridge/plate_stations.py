@@ -11,6 +11,7 @@ from qgis.core import QgsFeatureSource
 
 from ..core.errors import DownwarpError
 from ..core.stated import PlateStations
+from ..core.wording import say
 from .keys import Values
 from .outputs import Track
 from .picks import number_of
@@ -36,10 +37,12 @@ def plate_fields(values: Values, source: QgsFeatureSource, needed: tuple[str, ..
         if source.fields().lookupField(name) >= 0:
             found[key] = name
         elif name != usual or key == "DISTANCE":
-            raise DownwarpError(f"{key}: INPUT has no field {name!r}.")
+            raise DownwarpError("{key}: INPUT has no field {name!r}.", key=key, name=name)
     for name in needed:
         if source.fields().lookupField(name) < 0:
-            raise DownwarpError(f"INPUT has no field {name!r}; it takes the STATIONS of fittransects or bendtransects.")
+            raise DownwarpError(
+                "INPUT has no field {name!r}; it takes the STATIONS of fittransects or bendtransects.", name=name
+            )
     return found["DISTANCE"], found.get("TRANSECT_FIELD")
 
 
@@ -58,9 +61,12 @@ def plate_items(
         name = str(feature[transect]) if transect is not None else "1"
         group = groups.setdefault(name, [])
         try:
-            row = [number_of(feature[each], f"Transect {name}: field {each}") for each in (distance, *names)]
+            row = [
+                number_of(feature[each], say("Transect {name}: field {field}", name=name, field=each))
+                for each in (distance, *names)
+            ]
         except DownwarpError as error:
-            reasons.setdefault(name, str(error))
+            reasons.setdefault(name, error.message)
             continue
         point = next(feature.geometry().vertices(), None) if located and feature.hasGeometry() else None
         group.append([*row, point.x(), point.y()] if point is not None else [*row, np.nan, np.nan])
@@ -75,13 +81,17 @@ def _read(name: str, names: list[str], group: list[list[float]], reason: str | N
     table = table[np.isfinite(table[:, 0])]
     table = table[np.argsort(table[:, 0], kind="stable")]
     if len(table) < 2:
-        raise DownwarpError(f"Transect {name} has {len(table)} stations with a distance; it takes at least 2.")
+        raise DownwarpError(
+            "Transect {name} has {count} stations with a distance; it takes at least 2.", name=name, count=len(table)
+        )
     distance = table[:, 0] * 1e3
     repeated = table[1:, 0][np.diff(distance) <= 0]
     if repeated.size:
         raise DownwarpError(
-            f"Transect {name} has two stations at distance {repeated[0]:g} km (DISTANCE); it takes one each, and "
-            "TRANSECT_FIELD where INPUT holds several transects."
+            "Transect {name} has two stations at distance {distance:g} km (DISTANCE); it takes one each, and "
+            "TRANSECT_FIELD where INPUT holds several transects.",
+            name=name,
+            distance=repeated[0],
         )
     nowhere = np.full(distance.shape, np.nan)
     columns = dict.fromkeys(COLUMNS.values(), nowhere)

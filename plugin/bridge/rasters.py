@@ -1,4 +1,4 @@
-"""Values of a raster layer at places given in degrees: bilinear, read in small windows, off the main thread."""
+"""Values of a raster layer at places given in degrees: bilinear, read tile by tile, off the main thread."""
 
 from __future__ import annotations
 
@@ -9,8 +9,11 @@ import numpy as np
 from qgis.core import Qgis, QgsCoordinateReferenceSystem, QgsRasterLayer, QgsRasterRange, QgsRectangle
 
 from ..core import bilinear, check
+from ..core.by_pyproj import in_shape
 from ..core.errors import DownwarpError
+from ..core.wording import say
 from .frames import Frame, full_turn, pyproj_crs, transformed, transformer
+from .tiles import Tiles
 
 UNITS = (1.0, 0.3048, 1200.0 / 3937.0, 1000.0)
 """Metres in a metre, a foot, a US survey foot and a kilometre: the factors of RELIEF_UNIT."""
@@ -18,11 +21,8 @@ UNITS = (1.0, 0.3048, 1200.0 / 3937.0, 1000.0)
 KILOMETRES = 3
 """Place of the kilometre among them."""
 
-_TILE = 256
-"""Side, in cells, of the squares in which cells are read: no window is larger."""
-
-_POINTS_AT_ONCE = 500_000
-"""Points whose cells are held in memory together."""
+_POINTS_AT_ONCE = 16_384
+"""Points that are worked on together: few enough for what is made of them to stay in the processor's cache."""
 
 _TYPES: dict[Any, type] = {
     getattr(Qgis.DataType, name): dtype
@@ -42,6 +42,8 @@ _TYPES: dict[Any, type] = {
 
 class RasterReader:
     """One band of a raster layer. Make it on the main thread; it keeps its own copy of the layer's data provider.
+
+    Cells are read in tiles, and those used last are kept: lines near each other read each tile once.
 
     Scale, offset and "no data", also what the user has declared as such, count as QGIS has them. Cells follow the
     layer's extent, rows from the top. A raster that is rotated in its file is read as QGIS shows it, resampled to the
@@ -66,7 +68,7 @@ class RasterReader:
         Raises DownwarpError for a layer that cannot be read, a band that does not exist, and a missing CRS.
         """
         if layer is None or not layer.isValid() or layer.dataProvider() is None:
-            raise DownwarpError(f"{label} is not a raster that can be read.")
+            raise DownwarpError("{label} is not a raster that can be read.", label=label)
         self._label = label
         self._frame = frame
         self._band = _whole(f"{label}_BAND", band, 1, layer.bandCount())
@@ -74,16 +76,20 @@ class RasterReader:
         if crs is None or not crs.isValid():
             crs = layer.crs()
         if not crs.isValid():
-            raise DownwarpError(f"{label} carries no CRS: give it as DEM_CRS.")
+            raise DownwarpError("{label} carries no CRS: give it as DEM_CRS.", label=label)
         self._provider = layer.dataProvider().clone()
         self._rows, self._columns = self._provider.ySize(), self._provider.xSize()
         if self._rows < 1 or self._columns < 1:
-            raise DownwarpError(f"{label} has no cells of its own (is it a web map?).")
-        if self._provider.dataType(self._band) not in _TYPES:
-            raise DownwarpError(f"{label} has band {self._band} in a type that holds no plain numbers.")
+            raise DownwarpError("{label} has no cells of its own (is it a web map?).", label=label)
+        kind = self._provider.dataType(self._band)
+        if kind not in _TYPES:
+            raise DownwarpError(
+                "{label} has band {band} in a type that holds no plain numbers.", label=label, band=self._band
+            )
         extent = self._provider.extent()
         self._left, self._top = extent.xMinimum(), extent.yMaximum()
         self._width, self._height = extent.width() / self._columns, extent.height() / self._rows
+        self._tiles = Tiles(self._read, (self._rows, self._columns), _kept_as(np.dtype(_TYPES[kind])))
         own = pyproj_crs(crs, label)
         self._crs_name = own.name
         self._to_raster = transformer(frame.geographic, own, label)
@@ -103,13 +109,13 @@ class RasterReader:
         row, column, closed = self._cells(longitude.ravel(), latitude.ravel())
         for first in range(0, values.size, _POINTS_AT_ONCE):
             part = slice(first, first + _POINTS_AT_ONCE)
-            rows, columns, weights = bilinear.corners(row[part], column[part], (self._rows, self._columns), closed)
 
-            def part_progress(fraction: float, done: int = first, size: int = rows.shape[1]) -> None:
+            def part_progress(fraction: float, done: int = first) -> None:
                 if progress is not None:
-                    progress((done + fraction * size) / values.size)
+                    progress((done + fraction * min(_POINTS_AT_ONCE, values.size - done)) / values.size)
 
-            values[part] = bilinear.blend(self._gather(rows, columns, weights > 0.0, part_progress), weights)
+            part_progress(0.0)
+            values[part] = self._blended(row[part], column[part], closed, part_progress)
         return values.reshape(longitude.shape) * self._factor
 
     def cell_size_m(self, longitude: np.ndarray, latitude: np.ndarray) -> np.ndarray:
@@ -138,8 +144,8 @@ class RasterReader:
             y = self._top - (rows + 0.5) * self._height
             ends.extend(transformed(self._to_raster, x, y, "INVERSE"))
         known = np.isfinite(ends).all(axis=0)
-        _, _, distance = self._frame.ellipsoid.inv(*(np.where(known, values, 0.0) for values in ends))
-        return np.where(known, np.reshape(distance, known.shape), np.nan)
+        _, _, distance = in_shape(self._frame.ellipsoid.inv, *(np.where(known, values, 0.0) for values in ends))
+        return np.where(known, distance, np.nan)
 
     def _cells(self, longitude: np.ndarray, latitude: np.ndarray) -> tuple[np.ndarray, np.ndarray, bool]:
         """Fractional row and column of places, counted in cell centres (NaN where there are none), and whether the
@@ -147,13 +153,16 @@ class RasterReader:
         x, y = transformed(self._to_raster, longitude, latitude)
         known = np.isfinite(x) & np.isfinite(y)
         if longitude.size and not known.any():
-            raise DownwarpError(f"{self._label} has CRS {self._crs_name}, into which no station can be brought.")
+            raise DownwarpError(
+                "{label} has CRS {crs}, into which no station can be brought.", label=self._label, crs=self._crs_name
+            )
         row = (self._top - np.where(known, y, np.nan)) / self._height - 0.5
         column = (np.where(known, x, np.nan) - self._left) / self._width - 0.5
         turn = self._columns_in_turn
         if turn is None:
             return row, column, False
-        column = column % turn
+        if column.size and not (column.min() >= 0.0 and column.max() < turn):
+            column = column % turn
         last = self._columns - 1
         gap = turn - last
         if gap > 1.5:
@@ -163,41 +172,45 @@ class RasterReader:
         column[across_seam] = last + (column[across_seam] - last) / gap
         return row, column, True
 
-    def _gather(
-        self, rows: np.ndarray, columns: np.ndarray, needed: np.ndarray, progress: Callable[[float], None]
+    def _blended(
+        self, row: np.ndarray, column: np.ndarray, closed: bool, progress: Callable[[float], None]
     ) -> np.ndarray:
-        """Values of the needed cells, in the raster's unit, NaN elsewhere; each tile is read once."""
-        values = np.full(rows.size, np.nan)
-        index = np.flatnonzero(needed)
-        rows, columns = rows.ravel()[index], columns.ravel()[index]
-        tile = (rows // _TILE) * (self._columns // _TILE + 1) + columns // _TILE
-        order = np.argsort(tile, kind="stable")
-        groups = np.split(order, np.flatnonzero(np.diff(tile[order])) + 1) if order.size else []
-        for number, group in enumerate(groups):
-            progress(number / len(groups))
-            row, column = rows[group], columns[group]
-            top, left = int(row.min()), int(column.min())
-            window = self._read(top, left, int(row.max()) - top + 1, int(column.max()) - left + 1)
-            values[index[group]] = window[row - top, column - left]
-        return values.reshape(needed.shape)
+        """Values at fractional positions, in the raster's unit."""
+        rows, columns, weights = bilinear.corners(row, column, (self._rows, self._columns), closed)
+        needed = weights > 0.0
+        if needed.all():
+            return bilinear.blend(self._tiles.values(rows, columns, progress), weights)
+        values = np.full(weights.shape, np.nan)
+        values[needed] = self._tiles.values(rows[needed], columns[needed], progress)
+        return bilinear.blend(values, weights)
 
     def _read(self, top: int, left: int, rows: int, columns: int) -> np.ndarray:
-        """A window of cells as float, NaN where there is no data, shape (rows, columns)."""
+        """A window of cells, NaN where there is no data, shape (rows, columns), in a type that holds them exactly."""
         x, y = self._left + left * self._width, self._top - top * self._height
         extent = QgsRectangle(x, y - rows * self._height, x + columns * self._width, y)
         block = self._provider.block(self._band, extent, columns, rows)
         if not block.isValid() or block.width() != columns or block.height() != rows:
-            raise DownwarpError(f"{self._label} could not be read: {block.error().summary() or 'no reason is given'}.")
+            raise DownwarpError(
+                "{label} could not be read: {reason}.",
+                label=self._label,
+                reason=block.error().summary() or say("no reason is given"),
+            )
         raw = np.frombuffer(bytes(block.data()), dtype=_TYPES[block.dataType()]).reshape(rows, columns)
-        values = raw.astype(float)
-        missing = ~np.isfinite(values)
+        missing = ~np.isfinite(raw)
         if block.hasNoDataValue():
             nodata = np.asarray(block.noDataValue())
             missing |= raw == (nodata.astype(raw.dtype) if raw.dtype.kind == "f" else nodata)
         # Where the source declares no value for "no data", the user's ranges are bits in the block, out of reach.
         for declared in self._provider.userNoDataValues(self._band):
-            missing |= _within(values, declared)
-        return np.where(missing, np.nan, values)
+            missing |= _within(raw.astype(float), declared)
+        values = raw.astype(_kept_as(raw.dtype))
+        values[missing] = np.nan
+        return values
+
+
+def _kept_as(dtype: np.dtype) -> np.dtype:
+    """The smallest type of real numbers that holds all values of a type of cells."""
+    return np.result_type(dtype, np.float32)
 
 
 def _within(values: np.ndarray, declared: QgsRasterRange) -> np.ndarray:
@@ -211,5 +224,5 @@ def _within(values: np.ndarray, declared: QgsRasterRange) -> np.ndarray:
 def _whole(name: str, value: Any, least: int, most: int) -> int:
     result = check.number(name, value, at_least=least, at_most=most)
     if result != int(result):
-        raise DownwarpError(f"{name} is {result:g}; it takes a whole number.")
+        raise DownwarpError("{name} is {result:g}; it takes a whole number.", name=name, result=result)
     return int(result)

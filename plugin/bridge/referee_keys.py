@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from typing import NoReturn
+
 from ..core.constants import (
     BOUGUER_DENSITY,
     CRUST_DENSITY,
@@ -12,6 +15,7 @@ from ..core.constants import (
 )
 from ..core.cooling import PLATE, STEADY, Geotherm, age_of_heat_flow, usual
 from ..core.errors import DownwarpError
+from ..core.wording import listed, say
 from .keys import CONSTANTS, STATION_FIELDS, Key, Values
 
 INPUT = tuple(key for key in STATION_FIELDS if key.name in ("INPUT", "DISTANCE", "TRANSECT_FIELD"))
@@ -68,7 +72,7 @@ AGE = (
 )
 LOAD_AGE = (Key("LOAD_AGE_MYR", "number", "Age of the load, Myr", 0.0),)
 HEAT_FLOW = (Key("HEAT_FLOW", "number", "Surface heat flow, mW/m2 (in place of an age)"),)
-_THERMAL = ("Cooling half-space", "Cooling plate")
+_THERMAL = (say("Cooling half-space"), say("Cooling plate"))
 COOLING = (Key("THERMAL", "enum", "Temperature", PLATE, _THERMAL),)
 THERMAL = (Key("THERMAL", "enum", "Temperature", PLATE, (*_THERMAL, "Steady heat flow")),)
 HEAT = (
@@ -100,26 +104,34 @@ def isotherms(values: Values) -> tuple[float, ...]:
             found.append(float(part))
         except ValueError:
             raise DownwarpError(
-                f"ISOTHERMS is {text!r}; it takes temperatures in degrees C with commas between, such as 300, 450, 600."
+                "ISOTHERMS is {text!r}; it takes temperatures in degrees C with commas between, such as 300, 450, 600.",
+                text=text,
             ) from None
     if not all(0 < each < 2000 for each in found):
-        raise DownwarpError(f"ISOTHERMS is {text!r}; each temperature must be above 0 and below 2000 degrees C.")
+        raise DownwarpError(
+            "ISOTHERMS is {text!r}; each temperature must be above 0 and below 2000 degrees C.", text=text
+        )
     return tuple(sorted(set(found)))
+
+
+def refuse_number_of_ages(given: Sequence[str], names: Sequence[str]) -> NoReturn:
+    """Raise DownwarpError where not one of the keys ``names`` is given but those ``given``."""
+    if given:
+        raise DownwarpError("{given} are given; it takes one of them.", given=listed(given, say(" and ")))
+    raise DownwarpError("None of {names} is given; it takes one of them.", names=listed(names))
 
 
 def check_age(values: Values, optional: bool = False) -> None:
     """Refuse ages and heat flows that contradict each other; ``optional``: none is needed."""
     given = [name for name in ("AGE_MYR", "AGE", "HEAT_FLOW") if name in values.keys and values.given(name)]
-    names = ", ".join(name for name in ("AGE_MYR", "AGE", "HEAT_FLOW") if name in values.keys)
-    if len(given) > 1:
-        raise DownwarpError(f"{' and '.join(given)} are given; it takes one of them.")
-    if not given and not optional:
-        raise DownwarpError(f"None of {names} is given; it takes one of them.")
+    names = [name for name in ("AGE_MYR", "AGE", "HEAT_FLOW") if name in values.keys]
+    if len(given) > 1 or not (given or optional):
+        refuse_number_of_ages(given, names)
     for name in ("AGE_MYR", "HEAT_FLOW", "AGE_UNIT_MYR", "RHO_MANTLE"):
         if name in values.keys:
             value = values.number(name)
             if value is not None and value <= 0:
-                raise DownwarpError(f"{name} is {value:g}; it takes a number above 0.")
+                raise DownwarpError("{name} is {value:g}; it takes a number above 0.", name=name, value=value)
     if "HEAT_FLOW" in values.keys and values.enum("THERMAL") == STEADY and given != ["HEAT_FLOW"]:
         raise DownwarpError("THERMAL is 2 (steady heat flow), which takes HEAT_FLOW rather than an age.")
 

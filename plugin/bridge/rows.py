@@ -11,6 +11,8 @@ from ..core.elastic import flexural_parameter
 from ..core.profile import Profile
 from ..core.result import Bent, Estimate, Fit, FitResult
 from ..core.settings import PLATE_NAMES, SETTINGS
+from ..translation import joined
+from .fields import FIELDS
 
 Row = dict[str, Any]
 
@@ -49,7 +51,7 @@ def bent_row(bent: Bent) -> Row:
         "rho_mantle": rho.mantle,
         "rho_infill": rho.infill,
         "rho_load": rho.load,
-        "remarks": "; ".join(bent.problem.remarks + bent.remarks),
+        "remarks": joined(bent.problem.remarks + bent.remarks),
     }
 
 
@@ -66,7 +68,7 @@ def profile_row(result: FitResult) -> Row:
         rms_m=best.rms,
         stations_fit=best.count,
         stations_effective=best.effective,
-        remarks="; ".join(result.remarks),
+        remarks=joined(result.remarks),
     )
     near, change = (Estimate(None),) * 2 if best.zones is None else (best.zones.near, best.zones.change)
     for name, estimate in (("te_near", near), ("zone_change", change)):
@@ -76,6 +78,15 @@ def profile_row(result: FitResult) -> Row:
     if best.thickness.value is None:
         row.update(rigidity_nm=None, flexural_parameter_km=None)
     return row
+
+
+def strike_row(result: FitResult) -> Row:
+    """ALONG_STRIKE values of a fitted transect, but for its place."""
+    row = profile_row(result)
+    for name, unit in (("end_shear", "n_per_m"), ("end_moment", "n")):
+        force = result.best.coefficients.get(name, Estimate(None))
+        row[f"{name}_low_{unit}"], row[f"{name}_high_{unit}"] = force.low, force.high
+    return {name: row[name] for name in FIELDS["ALONG_STRIKE"] if name in row}
 
 
 def station_rows(bent: Bent, thickness_known: bool = True) -> Iterator[Row]:

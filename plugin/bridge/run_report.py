@@ -4,43 +4,62 @@ from __future__ import annotations
 
 import configparser
 import platform
+import shutil
 from collections.abc import Iterator
+from contextlib import contextmanager
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import Any
 
 import numpy as np
-from qgis.core import Qgis, QgsCoordinateReferenceSystem
+from qgis.core import Qgis
 
-from ..core.result import FitResult
+from ..core.errors import DownwarpError
+from ..core.wording import say
 from ..report.page import ReportedTransect, write_report
-from .frames import Frame
-from .outputs import Track
-from .runs import Finished
+from .along_strike import AlongStrike
+from .destinations import folder_in, replace_file
+from .runs import Finished, Progress
 
 METADATA = Path(__file__).resolve().parents[2] / "metadata.txt"
 
 
+@contextmanager
+def staged_report(path: str) -> Iterator[Path | None]:
+    """A file to write the report to, which is put into its place at the end, where nothing was raised; None without
+    a path. Raises DownwarpError where there is no room for it beside that place."""
+    if not path:
+        yield None
+        return
+    place = Path(path)
+    try:
+        folder = folder_in(place.parent)
+    except OSError as error:
+        raise DownwarpError("REPORT cannot be written to {path}: {why}.", path=path, why=error.strerror) from None
+    try:
+        yield folder / place.name
+        replace_file(folder / place.name, place)
+    finally:
+        shutil.rmtree(folder, ignore_errors=True)
+
+
 def write_run_report(
-    path: str, finished: Finished, crs: QgsCoordinateReferenceSystem | None, inputs: dict[str, str]
+    path: Path, finished: Finished, strike: AlongStrike, inputs: dict[str, str], progress: Progress
 ) -> None:
-    """Write the report of a finished run; ``crs`` is that of the tracks, None where they have none."""
-    frame = None if crs is None or not crs.isValid() else Frame.of(crs, "TRANSECTS")
-    write_report(path, _reported(finished, frame), finished.failures, inputs, versions())
+    """Write the report of a finished run; ``strike`` has met all of its results, ``progress`` may raise to stop."""
+    write_report(path, _reported(finished, strike, progress), finished.failures, inputs, versions())
 
 
-def _reported(finished: Finished, frame: Frame | None) -> Iterator[ReportedTransect]:
-    for track, result, _, why in finished.entries():
-        if not why:
-            yield reported(result, track, frame)
-
-
-def reported(result: FitResult, track: Track | None, frame: Frame | None) -> ReportedTransect:
-    """A result with its line in degrees."""
-    line = None
-    if track is not None and frame is not None:
-        line = np.column_stack(frame.to_degrees(track.x, track.y))
-    return ReportedTransect(result, line)
+def _reported(finished: Finished, strike: AlongStrike, progress: Progress) -> Iterator[ReportedTransect]:
+    _, distances = strike.distances()
+    fitted = ((track, result) for track, result, _, why in finished.entries() if not why)
+    for done, ((track, result), along) in enumerate(zip(fitted, distances)):
+        progress(done / finished.count)
+        line = None
+        if track is not None and strike.frame is not None:
+            line = np.column_stack(strike.frame.to_degrees(track.x, track.y))
+        yield ReportedTransect(result, line, along)
+    progress(1.0)
 
 
 def inputs_of(algorithm, parameters: dict[str, Any], context) -> dict[str, str]:
@@ -65,5 +84,5 @@ def versions() -> dict[str, str]:
         try:
             found[package] = version(package)
         except PackageNotFoundError:
-            found[package] = "not found"
+            found[package] = say("not found")
     return found

@@ -11,15 +11,16 @@ import pickle
 import tempfile
 import time
 from collections import deque
-from collections.abc import Callable, Iterable, Iterator
-from concurrent.futures import Future, TimeoutError
+from collections.abc import Callable, Generator, Iterable, Iterator
+from concurrent.futures import Future, wait
 from dataclasses import dataclass
 from functools import partial
 from typing import Any
 
 from ..core.errors import Cancelled, DownwarpError
 from ..core.profile import Profile
-from .keys import tr
+from ..core.wording import say
+from ..translation import tr, translated
 from .outputs import Outputs, Track
 from .progress import progress_of
 from .workers import FitPool
@@ -31,7 +32,7 @@ SAMPLING_SHARE = 0.3
 WRITING_SHARE = 0.05
 """Part of a run's progress that writing takes."""
 IN_FLIGHT = 3
-"""Transects, for each worker, that are sampled but not yet fitted."""
+"""Transects, for each process that fits, that are sampled but not yet kept."""
 LOOK_EVERY = 0.2
 """Time, s, between looks at whether the run was cancelled."""
 TELL_EVERY = 5.0
@@ -94,70 +95,127 @@ def run_each(
     items: Iterable[Item],
     count: int,
     feedback,
-    work: Callable[[Profile, Progress], Any] | FitPool,
+    work: Callable[[Profile, Progress], Any],
     write: Callable[[Outputs, Any, Track | None], None],
+    finish: Callable[[Finished, Progress], None] | None = None,
+    pool: FitPool | None = None,
 ) -> Finished:
-    """Sample each of ``count`` items and ``work`` on it, here or in a pool, then ``write`` all into the sinks.
+    """Sample each of ``count`` items and ``work`` on it, here and in a ``pool``, which must come to the same, then
+    ``write`` all into the sinks.
 
     Failed transects are rows of PROFILES or CHECKS, whichever is among the sinks ``names``, with the reason in their
-    remarks.
+    remarks. ``items`` that are made one by one are closed in the end. ``finish``: what is to be done when all is written
+    and nothing has found its place yet.
     Raises DownwarpError where all fail, and Cancelled.
     """
     finished = Finished()
-    clock = _Clock(feedback, count)
-    pool = work if isinstance(work, FitPool) else None
-    waiting: deque[tuple[str, Track | None, Future]] = deque()
-
-    def settle(name: str, track: Track | None, answer: Callable[[], Any]) -> None:
-        try:
-            finished.add(track, answer())
-        except DownwarpError as error:
-            finished.add_failure(name, str(error))
-            feedback.pushWarning(str(error))
-        clock.tell(finished.count + len(finished.failures))
-
-    for index, item in enumerate(items):
-        start, end = clock.share(index), clock.share(index + 1)
-        middle = start + SAMPLING_SHARE * (end - start)
-        sampling = progress_of(feedback, start, middle if pool is None else start)
-        sampling(0.0)
-        try:
-            track, profile = item.sample(sampling)
-        except DownwarpError as error:
-            # Through the queue, so that order is kept.
-            failed: Future = Future()
-            failed.set_exception(error)
-            waiting.append((item.name, None, failed))
-        else:
-            if not isinstance(work, FitPool):
-                settle(item.name, track, partial(work, profile, progress_of(feedback, middle, end)))
-                continue
-            waiting.append((item.name, track, work.submit(profile)))
-        while waiting and (pool is None or len(waiting) >= IN_FLIGHT * pool.workers):
-            name, track, future = waiting.popleft()
-            settle(name, track, partial(_patient, future, feedback))
-    while waiting:
-        name, track, future = waiting.popleft()
-        settle(name, track, partial(_patient, future, feedback))
-    if not finished.count:
-        raise DownwarpError(_all_failed(finished.failures))
-    _write_all(finished, outputs, names, feedback, write)
+    try:
+        _work_through(finished, items, count, feedback, work, pool)
+        if not finished.count:
+            raise DownwarpError(_all_failed(finished.failures))
+        _write_all(finished, outputs, names, feedback, write, finish)
+    except BaseException:
+        finished.close()
+        raise
+    finally:
+        # What reads features keeps a connection to their file, of which QGIS has few: left to the exception that ends a
+        # cancelled run, they would run out.
+        if isinstance(items, Generator):
+            items.close()
     return finished
 
 
-def _patient(future: Future, feedback) -> Any:
-    """The future's result, with an eye on the cancel button."""
-    while True:
+@dataclass
+class _Waiting:
+    """A transect whose result is not kept yet."""
+
+    name: str
+    track: Track | None
+    profile: Profile | None
+    """None where it could not be sampled."""
+    answer: Future
+
+
+def _work_through(
+    finished: Finished,
+    items: Iterable[Item],
+    count: int,
+    feedback,
+    work: Callable[[Profile, Progress], Any],
+    pool: FitPool | None,
+) -> None:
+    """Sample items, work on them, and keep what comes of each in order.
+
+    With a pool this process does what it would have to wait for.
+    """
+    clock = _Clock(feedback, count)
+    waiting: deque[_Waiting] = deque()
+    room = 0 if pool is None else IN_FLIGHT * (pool.workers + 1)
+
+    def settle() -> None:
+        """Keep the results that are there, as far as none before them is missing."""
+        while waiting and waiting[0].answer.done():
+            first = waiting.popleft()
+            try:
+                finished.add(first.track, first.answer.result())
+            except DownwarpError as error:
+                finished.add_failure(first.name, error.message)
+                feedback.pushWarning(translated(error.message))
+            clock.tell(finished.count + len(finished.failures))
+
+    def help_out() -> None:
+        """Work on the transect that would come last, or wait where all are under way."""
+        still = clock.share(finished.count + len(finished.failures))
+        for each in reversed(waiting):
+            if each.profile is not None and each.answer.cancel():
+                each.answer = _here(partial(work, each.profile, progress_of(feedback, still, still)))
+                return
+        _patient(waiting[0].answer, feedback)
+
+    for index, item in enumerate(items):
+        done = finished.count + len(finished.failures)
+        start, end = clock.share(done), clock.share(index + 1 if pool is None else done)
+        middle = start + SAMPLING_SHARE * (end - start)
+        sampled = _here(partial(item.sample, progress_of(feedback, start, middle)))
+        if sampled.exception() is not None:
+            waiting.append(_Waiting(item.name, None, None, sampled))
+        else:
+            track, profile = sampled.result()
+            if pool is None:
+                answer = _here(partial(work, profile, progress_of(feedback, middle, end)))
+            else:
+                answer = pool.submit(profile)
+            waiting.append(_Waiting(item.name, track, profile, answer))
+        settle()
+        while len(waiting) > room:
+            help_out()
+            settle()
+    while waiting:
+        help_out()
+        settle()
+
+
+def _here(call: Callable[[], Any]) -> Future:
+    """What ``call`` comes to, or the reason why it comes to nothing, as of another process; anything else is raised."""
+    answer: Future = Future()
+    try:
+        answer.set_result(call())
+    except DownwarpError as error:
+        answer.set_exception(error)
+    return answer
+
+
+def _patient(answer: Future, feedback) -> None:
+    """Wait for an answer, with an eye on the cancel button."""
+    while not answer.done():
         if feedback.isCanceled():
             raise Cancelled
-        try:
-            return future.result(timeout=LOOK_EVERY)
-        except TimeoutError:
-            continue
+        wait((answer,), timeout=LOOK_EVERY)
 
 
-def _write_all(finished: Finished, outputs: Outputs, names: tuple[str, ...], feedback, write) -> None:
-    progress = progress_of(feedback, 1.0 - WRITING_SHARE, 1.0)
+def _write_all(finished: Finished, outputs: Outputs, names: tuple[str, ...], feedback, write, finish) -> None:
+    end = 1.0 if finish is None else 1.0 - 0.5 * WRITING_SHARE
+    progress = progress_of(feedback, 1.0 - WRITING_SHARE, end)
     progress(0.0)
     total = finished.count + len(finished.failures)
     try:
@@ -169,6 +227,9 @@ def _write_all(finished: Finished, outputs: Outputs, names: tuple[str, ...], fee
                 for sink in ROW_PER_TRANSECT.intersection(names):
                     outputs.failed(sink, name, why)
             progress(done / total)
+        if finish is not None:
+            finish(finished, progress_of(feedback, end, 1.0))
+            progress_of(feedback, end, 1.0)(1.0)
         for words in outputs.flush():
             feedback.pushWarning(words)
     finally:
@@ -193,14 +254,23 @@ class _Clock:
         if now - self._told >= TELL_EVERY and done < self._count:
             self._told = now
             left = (now - self._start) / done * (self._count - done)
-            words = tr("{done} of {count} transects; about {minutes} min {seconds} s left")
             minutes, seconds = divmod(round(left), 60)
-            self._feedback.setProgressText(words.format(done=done, count=self._count, minutes=minutes, seconds=seconds))
+            self._feedback.setProgressText(
+                tr(
+                    "{done} of {count} transects; about {minutes} min {seconds} s left",
+                    done=done,
+                    count=self._count,
+                    minutes=minutes,
+                    seconds=seconds,
+                )
+            )
 
 
 def _all_failed(failures: list[tuple[str, str]]) -> str:
     if not failures:
-        return "There is no transect: the input holds no feature."
+        return say("There is no transect: the input holds no feature.")
     if len(failures) == 1:
         return failures[0][1]
-    return f"None of the {len(failures)} transects could be worked on; the first: {failures[0][1]}"
+    return say(
+        "None of the {count} transects could be worked on; the first: {why}", count=len(failures), why=failures[0][1]
+    )

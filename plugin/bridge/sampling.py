@@ -10,11 +10,21 @@ import numpy as np
 from ..core import swath
 from ..core.choices import DENSITY_CHANGE
 from ..core.errors import DownwarpError
-from ..core.plan import PlanRelief, Window, lay_search_window, refinement
+from ..core.plan import (
+    CHECK_CELLS,
+    CHECK_REFINEMENT,
+    MOST_REFINEMENT,
+    SEARCH_CELLS,
+    PlanRelief,
+    Window,
+    lay_search_window,
+    refinement,
+)
 from ..core.profile import Picks, Profile
-from ..core.settings import MAPPED, FitOptions
+from ..core.settings import BROKEN, MAPPED, FitOptions
 from ..core.strip_check import flexural_reach
 from ..core.transect import Stations, Transect
+from ..core.wording import say
 from .areas import Areas
 from .picks import PickReader
 from .rasters import RasterReader
@@ -58,13 +68,15 @@ class Sampler:
         coarse = transect.stations(max(transect.length / 50, 1.0))
         cell = self.dem.cell_size_m(coarse.longitude, coarse.latitude)
         if not np.isfinite(cell).any():
-            raise DownwarpError(f"Transect {transect.name} lies outside the DEM.")
+            raise DownwarpError("Transect {transect} lies outside the DEM.", transect=transect.name)
         cell_size = float(np.nanmedian(cell))
         stations = transect.stations(self.step or min(cell_size, transect.length))
         longitude, latitude = transect.offset(stations, swath.offsets(self.width, self.strips))
         strips = self.dem.sample(longitude, latitude, progress)
         if not np.isfinite(strips).any():
-            raise DownwarpError(f"Transect {transect.name}: the DEM has no data anywhere along the line.")
+            raise DownwarpError(
+                "Transect {transect}: the DEM has no data anywhere along the line.", transect=transect.name
+            )
         below = None if self.observed is None else self.observed.sample(longitude, latitude, progress)
         mapped = options is not None and options.load_shape == MAPPED
         remarks = () if mapped else turn_remarks(transect)
@@ -75,15 +87,21 @@ class Sampler:
             left_out = int((~alignment.used).sum())
             if left_out:
                 remarks += (
-                    f"{left_out} of {self.strips} swath lines have no lowest point of their own and are left out",
+                    say(
+                        "{left_out} of {strips} swath lines have no lowest point of their own and are left out",
+                        left_out=left_out,
+                        strips=self.strips,
+                    ),
                 )
         relief = swath.combine(strips)
         surface = relief if below is None else swath.combine(below)
         if below is not None and not np.isfinite(below).any():
-            raise DownwarpError(f"Transect {transect.name}: OBSERVED has no data anywhere along the line.")
+            raise DownwarpError(
+                "Transect {transect}: OBSERVED has no data anywhere along the line.", transect=transect.name
+            )
         picks = Picks() if self.picks is None else self.picks.on(transect)
         plan = None
-        if options is not None and (mapped or options.check_strip):
+        if options is not None and (mapped or (options.check_strip and options.chosen("plate")[0] != BROKEN)):
             bare = below is None and picks.distance.size == 0
             plan, told = self._plan(transect, stations, cell_size, options, bare, progress)
             remarks += told
@@ -103,13 +121,18 @@ class Sampler:
             remarks,
             plan,
             None if self.thickness is None else self._thickness(transect, stations),
+            None if self.load_area is None else self.load_area.share(stations.longitude, stations.latitude),
         )
 
     def relief_in(
-        self, window: Window, cell_size: float, progress: Callable[[float], None] | None = None
+        self,
+        window: Window,
+        cell_size: float,
+        progress: Callable[[float], None] | None = None,
+        most: int = MOST_REFINEMENT,
     ) -> PlanRelief:
-        """Relief in a window; ``cell_size``: that of the DEM, m."""
-        parts = refinement(window, cell_size)
+        """Relief in a window; ``cell_size``: that of the DEM, m; ``most``: places along each side of its cells."""
+        parts = refinement(window, cell_size, most)
         longitude, latitude = window.places(parts)
         relief = self.dem.sample(longitude, latitude, progress)
         inside = None if self.load_area is None else self.load_area.contain(longitude, latitude)
@@ -131,18 +154,26 @@ class Sampler:
         if not bare and rho.infill + DENSITY_CHANGE < rho.mantle:
             # Denser infill, which is among the choices that a fit tries, makes plates bend more widely.
             widest = replace(options, rho_infill=rho.infill + DENSITY_CHANGE)
+        mapped = options.load_shape == MAPPED
+        cells, places = (SEARCH_CELLS, MOST_REFINEMENT) if mapped else (CHECK_CELLS, CHECK_REFINEMENT)
         alpha_from = flexural_reach(options, options.te_from, bare)
         alpha_to = flexural_reach(widest, options.te_to, bare)
         try:
             window, remarks = lay_search_window(
-                stations.distance, stations.longitude, stations.latitude, transect.ellipsoid, alpha_from, alpha_to
+                stations.distance,
+                stations.longitude,
+                stations.latitude,
+                transect.ellipsoid,
+                alpha_from,
+                alpha_to,
+                cells,
             )
         except DownwarpError as error:
-            if options.load_shape == MAPPED:
-                raise DownwarpError(f"Transect {transect.name}: {error}") from None
-            return None, (f"the strip was not checked: {error}",)
-        plan = self.relief_in(window, cell_size, progress)
-        return plan, remarks if options.load_shape == MAPPED else ()
+            if mapped:
+                raise DownwarpError("Transect {transect}: {why}", transect=transect.name, why=error.message) from None
+            return None, (say("the strip was not checked: {why}", why=error.message),)
+        plan = self.relief_in(window, cell_size, progress, places)
+        return plan, remarks if mapped else ()
 
     def _thickness(self, transect: Transect, stations: Stations) -> np.ndarray:
         """Elastic thickness at the stations, m; NaN where the raster has none."""
@@ -152,8 +183,11 @@ class Sampler:
         wrong = values[(values < LEAST_THICKNESS) | (values > MOST_THICKNESS)]
         if wrong.size:
             raise DownwarpError(
-                f"Transect {transect.name}: TE_RASTER holds {wrong[0] / 1e3:g} km; it takes numbers from "
-                f"{LEAST_THICKNESS / 1e3:g} to {MOST_THICKNESS / 1e3:g}."
+                "Transect {transect}: TE_RASTER holds {thickness:g} km; it takes numbers from {least:g} to {most:g}.",
+                transect=transect.name,
+                thickness=wrong[0] / 1e3,
+                least=LEAST_THICKNESS / 1e3,
+                most=MOST_THICKNESS / 1e3,
             )
         return values
 
@@ -163,7 +197,10 @@ def turn_remarks(transect: Transect) -> tuple[str, ...]:
     if transect.greatest_turn <= TURN_TOLD:
         return ()
     return (
-        f"the line turns by {transect.greatest_turn:.0f} degrees: a strip takes the load to run on at right angles to "
-        "each part of the line, so that it is counted twice inside the bend and missing outside it; draw the line "
-        "straight, or check the strip",
+        say(
+            "the line turns by {turn:.0f} degrees: a strip takes the load to run on at right angles to each part of the "
+            "line, so that it is counted twice inside the bend and missing outside it; draw the line straight, or check "
+            "the strip",
+            turn=transect.greatest_turn,
+        ),
     )

@@ -9,6 +9,7 @@ from qgis.core import QgsFeatureSource, QgsWkbTypes
 
 from ..core.errors import DownwarpError
 from ..core.profile import Profile
+from ..core.wording import say
 from .keys import Values
 from .outputs import Track
 from .picks import number_of
@@ -24,7 +25,7 @@ def field_names(values: Values, source: QgsFeatureSource) -> dict[str, str]:
         if source.fields().lookupField(name) >= 0:
             names[key] = name
         elif name != usual or key == "DISTANCE":
-            raise DownwarpError(f"{key}: INPUT has no field {name!r}.")
+            raise DownwarpError("{key}: INPUT has no field {name!r}.", key=key, name=name)
     if "LOAD_FIELD" not in names and "OBSERVED_FIELD" not in names:
         raise DownwarpError("INPUT has neither the field of LOAD_FIELD nor that of OBSERVED_FIELD; the fit takes one.")
     return names
@@ -35,19 +36,28 @@ def has_places(source: QgsFeatureSource) -> bool:
     return source.wkbType() != QgsWkbTypes.Type.NoGeometry
 
 
-def station_items(source: QgsFeatureSource, names: dict[str, str], resolution: float) -> list[Item]:
-    """The transects of INPUT in order of appearance; ``resolution`` in m."""
+def station_items(
+    source: QgsFeatureSource, names: dict[str, str], resolution: float, progress: Progress
+) -> list[Item]:
+    """The transects of INPUT in order of appearance; ``resolution`` in m; ``progress`` may raise to stop."""
     numeric = [key for key in names if key != "TRANSECT_FIELD"]
     located = has_places(source)
     groups: dict[str, list[list[float]]] = {}
     reasons: dict[str, str] = {}
     for feature in source.getFeatures():
+        progress(0.0)
         name = str(feature[names["TRANSECT_FIELD"]]) if "TRANSECT_FIELD" in names else "1"
         group = groups.setdefault(name, [])
         try:
-            row = [number_of(feature[names[key]], f"Transect {name}: {key} field {names[key]}") for key in numeric]
+            row = [
+                number_of(
+                    feature[names[key]],
+                    say("Transect {name}: {key} field {field}", name=name, key=key, field=names[key]),
+                )
+                for key in numeric
+            ]
         except DownwarpError as error:
-            reasons.setdefault(name, str(error))
+            reasons.setdefault(name, error.message)
             continue
         point = next(feature.geometry().vertices(), None) if located and feature.hasGeometry() else None
         group.append([*row, point.x(), point.y()] if point is not None else [*row, np.nan, np.nan])
@@ -69,23 +79,29 @@ def _sampled(
     order = np.argsort(columns["DISTANCE"], kind="stable")
     order = order[np.isfinite(columns["DISTANCE"][order])]
     if order.size < 2:
-        raise DownwarpError(f"Transect {name} has {order.size} stations with a distance; it takes at least 2.")
+        raise DownwarpError(
+            "Transect {name} has {count} stations with a distance; it takes at least 2.", name=name, count=order.size
+        )
     table = table[order]
     columns = {key: values[order] for key, values in columns.items() if np.isfinite(values).any()}
     distance = columns["DISTANCE"]
     repeated = distance[1:][np.diff(distance) <= 0]
     if repeated.size:
         raise DownwarpError(
-            f"Transect {name} has two stations at distance {repeated[0]:g} km (DISTANCE); it takes one each, and "
-            "TRANSECT_FIELD where INPUT holds several transects."
+            "Transect {name} has two stations at distance {distance:g} km (DISTANCE); it takes one each, and "
+            "TRANSECT_FIELD where INPUT holds several transects.",
+            name=name,
+            distance=repeated[0],
         )
     if (columns.get("SIGMA_FIELD", np.zeros(1)) < 0).any():
-        raise DownwarpError(f"Transect {name}: SIGMA_FIELD holds a number below 0; a standard deviation is above it.")
+        raise DownwarpError(
+            "Transect {name}: SIGMA_FIELD holds a number below 0; a standard deviation is above it.", name=name
+        )
     relief, observed = columns.get("LOAD_FIELD"), columns.get("OBSERVED_FIELD")
     if relief is None:
         relief, observed = observed, None
     if relief is None:
-        raise DownwarpError(f"Transect {name}: neither LOAD_FIELD nor OBSERVED_FIELD holds a number.")
+        raise DownwarpError("Transect {name}: neither LOAD_FIELD nor OBSERVED_FIELD holds a number.", name=name)
     profile = Profile(name, distance * 1e3, relief, observed, columns.get("SIGMA_FIELD"), resolution=resolution)
     place = table[:, -2:]
     track = Track(distance * 1e3, place[:, 0], place[:, 1]) if np.isfinite(place).all() else None

@@ -15,6 +15,8 @@ from ..core.errors import DownwarpError
 from ..core.stated import PlateStations
 from ..core.strength import Rock, elastic_stress
 from ..core.strength_check import StrengthCheck, check_strength
+from ..core.wording import say
+from ..translation import joined
 from .frames import Frame
 from .gravity_run import point_at
 from .keys import Values
@@ -27,9 +29,9 @@ from .stations import has_places
 
 SINKS = ("VERDICTS", "ENVELOPES", "MOMENTS")
 NUMBERS = {
-    "MOMENT_SHARE": "Moment of the plate over the largest that its strength carries",
-    "MECHANICAL_KM": "Mechanical thickness of the strength, km",
-    "EXPECTED_TE_KM": "Elastic thickness that the strength has at the plate's curvature, km",
+    "MOMENT_SHARE": say("Moment of the plate over the largest that its strength carries"),
+    "MECHANICAL_KM": say("Mechanical thickness of the strength, km"),
+    "EXPECTED_TE_KM": say("Elastic thickness that the strength has at the plate's curvature, km"),
 }
 """Numbers that a run returns, beside TRANSECTS_DONE."""
 ROWS = 101
@@ -80,7 +82,7 @@ class AgeReader:
         """Age, s, at places in the layer's CRS; raises DownwarpError where it is nowhere above 0."""
         age = self._reader.sample(*self._frame.to_degrees(np.asarray(x), np.asarray(y))) * self._unit
         if not (age > 0).any():
-            raise DownwarpError(f"{name}: AGE has no age above 0 there.")
+            raise DownwarpError("{name}: AGE has no age above 0 there.", name=name)
         return age
 
 
@@ -95,9 +97,9 @@ def age_reader(
         return None
     layer = algorithm.parameterAsRasterLayer(parameters, "AGE", context)
     if layer is None:
-        raise DownwarpError(f"AGE is not a raster that can be read: {parameters.get('AGE')}.")
+        raise DownwarpError("AGE is not a raster that can be read: {value}.", value=parameters.get("AGE"))
     if not has_places(source):
-        raise DownwarpError(f"INPUT has no geometry, which AGE needs; give {instead}.")
+        raise DownwarpError("INPUT has no geometry, which AGE needs; give {instead}.", instead=instead)
     frame = Frame.of(source.sourceCrs(), "INPUT")
     reader = RasterReader(layer, values.whole("AGE_BAND"), frame, "AGE")
     return AgeReader(reader, frame, values.required_number("AGE_UNIT_MYR") * MYR)
@@ -126,7 +128,9 @@ def aged(reader: AgeReader | None, plate: PlateStations, track: Track | None) ->
     if reader is None:
         return PlateWithAge(plate, None)
     if track is None:
-        raise DownwarpError(f"{plate.name}: the stations have no places, which AGE needs; give AGE_MYR.")
+        raise DownwarpError(
+            "{transect}: the stations have no places, which AGE needs; give AGE_MYR.", transect=plate.name
+        )
     index = plate.largest_curvature()[0]
     return PlateWithAge(plate, float(reader.at(plate.name, track.x[[index]], track.y[[index]])[0]))
 
@@ -164,7 +168,7 @@ def verdict_row(check: StrengthCheck) -> Row:
         "verdict": check.words,
         "young_gpa": check.elastic.young / 1e9,
         "poisson": check.elastic.poisson,
-        "remarks": "; ".join(check.remarks),
+        "remarks": joined(check.remarks),
     }
 
 

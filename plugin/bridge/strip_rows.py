@@ -8,6 +8,7 @@ import numpy as np
 
 from ..core.markers import Markers
 from ..core.strip_check import StripCheck
+from ..translation import joined, translated
 from .rows import Row, as_rows, bent_row
 
 _FROM_BENT = (
@@ -29,9 +30,9 @@ def check_row(check: StripCheck) -> Row:
         "bulge_shift_km": _times(check.bulge_shift, 1e-3),
         "strip_te_km": _times(check.strip_thickness, 1e-3),
         "te_error_percent": _times(check.thickness_error, 100.0),
-        "verdict": check.verdict,
+        "verdict": translated(check.verdict),
         "distortion_percent": 100.0 * check.distortion,
-        "remarks": "; ".join(dict.fromkeys(check.remarks)),
+        "remarks": joined(dict.fromkeys(check.remarks)),
     }
 
 

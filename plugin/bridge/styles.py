@@ -26,9 +26,12 @@ from qgis.core import (
     QgsVectorLayerSimpleLabeling,
     QgsWkbTypes,
 )
+from qgis.PyQt.QtCore import Qt
 from qgis.PyQt.QtGui import QColor, QFont
 
-from .keys import tr
+from ..core.strength_check import ELASTIC_SHARE
+from ..core.strip_check import ENOUGH, ROUGH
+from ..translation import tr
 
 INK, PLATE, PALE, LOAD, FAINT = "#26343a", "#1f6f84", "#ffffff", "#e08a2e", "#8a969b"
 
@@ -79,23 +82,102 @@ def _marker(shape: str, fill: str, size: float, stroke: str = INK) -> QgsMarkerS
     })  # fmt: skip
 
 
-def _profiles(layer: QgsVectorLayer) -> None:
-    """The plate's line with a pale edge, an arrow head at its far end and the thickness beside it."""
+def _line(colour: str = PLATE, pen: Qt.PenStyle = Qt.PenStyle.SolidLine) -> QgsLineSymbol:
+    """A line with a pale edge and an arrow head at its far end."""
     symbol = QgsLineSymbol.createSimple({"line_color": PALE, "line_width": "1.8", "capstyle": "round"})
-    plate = QgsSimpleLineSymbolLayer(QColor(PLATE), 0.9)
-    symbol.appendSymbolLayer(plate)
+    symbol.appendSymbolLayer(QgsSimpleLineSymbolLayer(QColor(colour), 0.9, pen))
     head = QgsMarkerLineSymbolLayer(True)
-    head.setSubSymbol(_marker("filled_arrowhead", PLATE, 3.6, PLATE))
+    head.setSubSymbol(_marker("filled_arrowhead", colour, 3.6, colour))
     _at_last_vertex(head)
     symbol.appendSymbolLayer(head)
-    layer.setRenderer(QgsSingleSymbolRenderer(symbol))
-    unknown, open_side, between = (_quoted(tr(word)) for word in ("not resolved", "open", "to"))
-    low, high = (f"coalesce(format_number(\"te_{side}_km\", 1), '{open_side}')" for side in ("low", "high"))
-    interval = f"' (' || {low} || ' {between} ' || {high} || ')'"
-    both_open = '"te_low_km" is null and "te_high_km" is null'
-    thickness = f"format_number(\"te_km\", 1) || ' km' || if({both_open}, '', {interval})"
-    expression = f"\"transect\" || '\\n' || if(\"te_km\" is null, '{unknown}', {thickness})"
-    _label(layer, expression, 9.0, "Line", 1.2, bold=True)
+    return symbol
+
+
+def _label_line(layer: QgsVectorLayer, expression: str) -> None:
+    """The transect's name and below it what an expression gives."""
+    _label(layer, f"\"transect\" || '\\n' || {expression}", 9.0, "Line", 1.2, bold=True)
+
+
+def _with_interval(value: str, low: str, high: str, unit: str, digits: int) -> str:
+    """An expression for the value of a field with the interval that two others hold."""
+    unknown, open_side, between = (_quoted(word) for word in (tr("not resolved"), tr("open"), tr("to")))
+    from_low, to_high = (f"coalesce(format_number(\"{side}\", {digits}), '{open_side}')" for side in (low, high))
+    interval = f"' (' || {from_low} || ' {between} ' || {to_high} || ')'"
+    both_open = f'"{low}" is null and "{high}" is null'
+    known = f"format_number(\"{value}\", {digits}) || ' {unit}' || if({both_open}, '', {interval})"
+    return f"if(\"{value}\" is null, '{unknown}', {known})"
+
+
+def _profiles(layer: QgsVectorLayer) -> None:
+    """The plate's line with the thickness beside it."""
+    layer.setRenderer(QgsSingleSymbolRenderer(_line()))
+    _label_line(layer, _with_interval("te_km", "te_low_km", "te_high_km", "km", 1))
+
+
+def _along_strike(layer: QgsVectorLayer) -> None:
+    """A square where each transect stands, with the thickness beside it."""
+    layer.setRenderer(QgsSingleSymbolRenderer(_marker("square", PLATE, 2.8)))
+    thickness = _with_interval("te_km", "te_low_km", "te_high_km", "km", 1)
+    _label(layer, f"\"transect\" || '\\n' || {thickness}", 8.0, "OrderedPositionsAroundPoint", 1.6)
+
+
+def _ages(layer: QgsVectorLayer) -> None:
+    """The transect's line with the temperature at the plate's base and its age when it was loaded."""
+    layer.setRenderer(QgsSingleSymbolRenderer(_line()))
+    temperature = _with_interval("temperature_c", "temperature_low_c", "temperature_high_c", "°C", 0)
+    age = _filled(tr("loaded at {age} Myr"), "age", 'format_number("age_at_loading_myr", 0)')
+    _label_line(layer, f"{temperature} || coalesce('\\n' || {age}, '')")
+
+
+def _checks(layer: QgsVectorLayer) -> None:
+    """The transect's line by what the strip's errors come to, with both errors beside it."""
+    worst = 'max(abs("deepest_error_percent"), abs("te_error_percent"))'
+    kind = (
+        "case when \"deepest_error_percent\" is null then 'unknown' when \"te_error_percent\" is null then 'wrong' "
+        f"when {worst} <= {100 * ENOUGH:g} then 'enough' when {worst} <= {100 * ROUGH:g} then 'rough' else 'wrong' end"
+    )
+    unknown = tr("the plate does not bend here")
+    layer.setRenderer(QgsCategorizedSymbolRenderer(kind, [
+        QgsRendererCategory("enough", _line(), tr("a strip is enough")),
+        QgsRendererCategory("rough", _line(LOAD, Qt.PenStyle.DashLine), tr("a strip is rough")),
+        QgsRendererCategory("wrong", _line(RAMP[-1], Qt.PenStyle.DotLine), tr("a strip is wrong")),
+        QgsRendererCategory("unknown", _line(FAINT), unknown),
+    ]))  # fmt: skip
+    deepest, thickness = (
+        _filled(words, "error", f"if(round({field}) > 0, '+', '') || round({field})")
+        for words, field in (
+            (tr("deepest {error} %"), '"deepest_error_percent"'), (tr("thickness {error} %"), '"te_error_percent"')
+        )
+    )  # fmt: skip
+    _label_line(layer, f"coalesce({deepest} || coalesce(', ' || {thickness}, ''), '{_quoted(unknown)}')")
+
+
+VERDICTS = {
+    "carried": ("circle", PLATE, 3.4, PALE),
+    "yielding": ("diamond", PALE, 4.2, INK),
+    "too much": ("cross_fill", LOAD, 5.0, INK),
+}
+"""Shape, fill, size, mm, and edge of each verdict on a plate's strength."""
+
+
+def _verdicts(layer: QgsVectorLayer) -> None:
+    """A shape of its own for each verdict, with the share of the largest moment beside it."""
+    kind = (
+        "case when \"moment_share\" >= 1 then 'too much' "
+        f"when \"overstressed_share\" <= {ELASTIC_SHARE:g} then 'carried' else 'yielding' end"
+    )
+    words = {"carried": tr("carried"), "yielding": tr("carried with yielding"), "too much": tr("not carried")}
+    layer.setRenderer(QgsCategorizedSymbolRenderer(kind, [
+        QgsRendererCategory(name, _marker(*look), words[name]) for name, look in VERDICTS.items()
+    ]))  # fmt: skip
+    share = _filled(tr("moment {share} % of the largest"), "share", 'format_number(100 * "moment_share", 0)')
+    _label(layer, f"\"transect\" || '\\n' || {share}", 8.0, "OrderedPositionsAroundPoint", 1.6)
+
+
+def _filled(words: str, name: str, expression: str) -> str:
+    """An expression for words in which an expression stands in the place ``name``; null where that is."""
+    before, _, after = words.partition(f"{{{name}}}")
+    return f"'{_quoted(before)}' || {expression} || '{_quoted(after)}'"
 
 
 def _quoted(text: str) -> str:
@@ -110,34 +192,55 @@ def _at_last_vertex(head: QgsMarkerLineSymbolLayer) -> None:
 
 
 def _stations(layer: QgsVectorLayer) -> None:
-    """Deflection in steps of one size about 0; what is not fitted is small and has a pale edge."""
-    largest = _largest(layer, "deflection_m")
+    """By deflection; what is not fitted is small and has a pale edge."""
+    _by_size(layer, "deflection_m", "m", '"in_fit" = 1')
+    _label_near(layer, "format_number(\"distance_km\", 0) || ' km'")
+
+
+def _check_stations(layer: QgsVectorLayer) -> None:
+    """By how much deeper the plate lies under the strip than under the load as mapped."""
+    _by_size(layer, "difference_m", "m")
+    _label_near(layer, "format_number(\"distance_km\", 0) || ' km'")
+
+
+def _anomalies(layer: QgsVectorLayer) -> None:
+    """By the plate's free-air anomaly; readings that were not compared are small and have a pale edge."""
+    _by_size(layer, "free_air_mgal", "mGal", '"in_fit" = 1 or "observed_mgal" is null')
+    _label_near(layer, "format_number(\"free_air_mgal\", 0) || ' mGal'")
+
+
+def _by_size(layer: QgsVectorLayer, field: str, unit: str, in_use: str = "true") -> None:
+    """Values in steps of one size about 0; ``in_use``: an expression for what is drawn large."""
+    largest = _largest(layer, field)
     if largest is None:
         layer.setRenderer(QgsSingleSymbolRenderer(_marker("circle", PALE, 1.6)))
-    else:
-        step = largest / (len(RAMP) // 2)
-        ranges = []
-        for place, colour in enumerate(RAMP):
-            low = (place - len(RAMP) // 2) * step
-            words = tr("{low} to {high} m").format(low=_plain(low), high=_plain(low + step))
-            ranges.append(QgsRendererRange(low, low + step, _station(colour), words))
-        renderer = QgsGraduatedSymbolRenderer("deflection_m", ranges)
-        layer.setRenderer(renderer)
-    _label(layer, "format_number(\"distance_km\", 0) || ' km'", 7.0, "OrderedPositionsAroundPoint")
-    labeling = layer.labeling()
-    settings = labeling.settings()
+        return
+    step = largest / (len(RAMP) // 2)
+    ranges = []
+    for place, colour in enumerate(RAMP):
+        low = (place - len(RAMP) // 2) * step
+        ends = {"low": _plain(low, step), "high": _plain(low + step, step)}
+        words = tr("{low} to {high} {unit}", unit=unit, **ends)
+        ranges.append(QgsRendererRange(low, low + step, _station(colour, in_use), words))
+    layer.setRenderer(QgsGraduatedSymbolRenderer(field, ranges))
+
+
+def _label_near(layer: QgsVectorLayer, expression: str) -> None:
+    """Labels that show once the map is large enough for them."""
+    _label(layer, expression, 7.0, "OrderedPositionsAroundPoint")
+    settings = layer.labeling().settings()
     settings.scaleVisibility = True
     settings.minimumScale = _STATION_LABELS_FROM
     settings.maximumScale = 0
     layer.setLabeling(QgsVectorLayerSimpleLabeling(settings))
 
 
-def _station(colour: str) -> QgsMarkerSymbol:
+def _station(colour: str, in_use: str) -> QgsMarkerSymbol:
     symbol = _marker("circle", colour, 2.2)
     layer = symbol.symbolLayer(0)
-    fitted = QgsProperty.fromExpression(f"if(\"in_fit\" = 1, '{INK}', '{PALE}')")
-    layer.setDataDefinedProperty(_property("StrokeColor"), fitted)
-    smaller = QgsProperty.fromExpression('if("in_fit" = 1, 2.2, 1.7)')
+    edge = QgsProperty.fromExpression(f"if({in_use}, '{INK}', '{PALE}')")
+    layer.setDataDefinedProperty(_property("StrokeColor"), edge)
+    smaller = QgsProperty.fromExpression(f"if({in_use}, 2.2, 1.7)")
     layer.setDataDefinedProperty(_property("Size"), smaller)
     return symbol
 
@@ -147,12 +250,12 @@ def _property(name: str):
     return getattr(QgsSymbolLayer.Property, name, None) or getattr(QgsSymbolLayer.Property, f"Property{name}")
 
 
-def _plain(value: float) -> str:
-    return f"{value:,.0f}"
+def _plain(value: float, step: float) -> str:
+    return f"{value:,.{0 if step >= 10 else 1 if step >= 1 else 3}f}"
 
 
 def _largest(layer: QgsVectorLayer, field: str) -> float | None:
-    """Largest absolute value of a field, rounded up to two digits; None where there is none but 0."""
+    """Largest absolute value of a field, rounded up to two digits or a tenth; None where there is none but 0."""
     index = layer.fields().lookupField(field)
     if index < 0:
         return None
@@ -221,14 +324,31 @@ def _in_elevation(layer: QgsVectorLayer, is_line: bool) -> None:
 
 
 def style_drawn(layer: QgsVectorLayer) -> None:
-    """The look of transects that are drawn by hand and not fitted yet: thin, with a pale edge and their name."""
+    """The look of transects that are drawn or laid and not fitted yet: thin, with a pale edge and their name."""
     symbol = QgsLineSymbol.createSimple({"line_color": PALE, "line_width": "1.2", "capstyle": "round"})
     symbol.appendSymbolLayer(QgsSimpleLineSymbolLayer(QColor(LOAD), 0.6))
     layer.setRenderer(QgsSingleSymbolRenderer(symbol))
     _label(layer, '"name"', 8.0, "Line", 0.8)
 
 
-_STYLES = {"PROFILES": _profiles, "STATIONS": _stations, "MARKERS": _markers}
+def style_left_out(layer: QgsVectorLayer) -> None:
+    """The look of narrow polygons along stations that are left out of a fit: an outline that is seen at any scale."""
+    outline = {"style": "no", "outline_color": LOAD, "outline_width": "0.8"}
+    layer.setRenderer(QgsSingleSymbolRenderer(QgsFillSymbol.createSimple(outline)))
+
+
+_STYLES = {
+    "TRANSECTS": style_drawn,
+    "PROFILES": _profiles,
+    "STATIONS": _stations,
+    "MARKERS": _markers,
+    "ALONG_STRIKE": _along_strike,
+    "CHECKS": _checks,
+    "CHECK_STATIONS": _check_stations,
+    "ANOMALIES": _anomalies,
+    "VERDICTS": _verdicts,
+    "AGES": _ages,
+}
 
 
 def apply_style(layer: QgsMapLayer, output: str) -> None:
@@ -238,7 +358,7 @@ def apply_style(layer: QgsMapLayer, output: str) -> None:
         return
     style(layer)
     if QgsWkbTypes.hasZ(layer.wkbType()):
-        _in_elevation(layer, output == "PROFILES")
+        _in_elevation(layer, layer.geometryType() == QgsWkbTypes.GeometryType.LineGeometry)
     layer.triggerRepaint()
 
 

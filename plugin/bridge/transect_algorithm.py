@@ -32,7 +32,7 @@ class TransectAlgorithm(DownwarpAlgorithm):
         self._source = required_source(self, parameters, "TRANSECTS", context)
         self._name_field = values.raw("NAME_FIELD") if "NAME_FIELD" in values.keys else None
         if self._name_field is not None and self._source.fields().lookupField(self._name_field) < 0:
-            raise DownwarpError(f"NAME_FIELD: TRANSECTS has no field {self._name_field!r}.")
+            raise DownwarpError("NAME_FIELD: TRANSECTS has no field {field!r}.", field=self._name_field)
         frame = Frame.of(self._source.sourceCrs(), "TRANSECTS")
         self._frame = frame
         with_thickness = "TE_RASTER" in values.keys and values.given("TE_RASTER")
@@ -52,18 +52,20 @@ class TransectAlgorithm(DownwarpAlgorithm):
     def check(self, values: Values) -> None:
         step = values.number("STEP_KM")
         if step is not None and step <= 0:
-            raise DownwarpError(f"STEP_KM is {step:g}; it takes a number above 0.")
+            raise DownwarpError("STEP_KM is {step:g}; it takes a number above 0.", step=step)
         if values.required_number("SWATH_KM") < 0:
-            raise DownwarpError(f"SWATH_KM is {values.number('SWATH_KM'):g}; it takes a number from 0.")
+            raise DownwarpError("SWATH_KM is {width:g}; it takes a number from 0.", width=values.number("SWATH_KM"))
         if not 1 <= values.whole("SWATH_LINES") <= 1000:
             raise DownwarpError(
-                f"SWATH_LINES is {values.whole('SWATH_LINES')}; it takes a whole number from 1 to 1000."
+                "SWATH_LINES is {count}; it takes a whole number from 1 to 1000.", count=values.whole("SWATH_LINES")
             )
 
     def _raster(self, values: Values, parameters, name: str, frame: Frame, context) -> RasterReader:
         layer = self.parameterAsRasterLayer(parameters, name, context)
         if layer is None:
-            raise DownwarpError(f"{name} is not a raster that can be read: {parameters.get(name)}.")
+            raise DownwarpError(
+                "{name} is not a raster that can be read: {value}.", name=name, value=parameters.get(name)
+            )
         # DEM_CRS is meant for the DEM; it serves OBSERVED where that carries none, too.
         override = values.given("DEM_CRS") and (name == "DEM" or not layer.crs().isValid())
         return RasterReader(
@@ -88,12 +90,12 @@ class TransectAlgorithm(DownwarpAlgorithm):
         for key in ("PICK_ELEVATION", "PICK_SIGMA"):
             fields[key] = values.raw(key)
             if fields[key] is not None and source.fields().lookupField(fields[key]) < 0:
-                raise DownwarpError(f"{key}: PICKS has no field {fields[key]!r}.")
+                raise DownwarpError("{key}: PICKS has no field {field!r}.", key=key, field=fields[key])
         if fields["PICK_ELEVATION"] is None:
             raise DownwarpError("PICK_ELEVATION is blank; it takes the field with the elevation of PICKS.")
         reach = values.required_number("PICK_REACH")
         if reach <= 0:
-            raise DownwarpError(f"PICK_REACH is {reach:g}; it takes a number above 0.")
+            raise DownwarpError("PICK_REACH is {reach:g}; it takes a number above 0.", reach=reach)
         return PickReader(source, frame, fields["PICK_ELEVATION"], fields["PICK_SIGMA"], reach * KM)
 
     def _name(self, feature: QgsFeature) -> str:

@@ -1,7 +1,6 @@
-"""Fits profiles in processes of their own, for a fit keeps Python busy and threads would take turns.
+"""Fits profiles in processes beside this one, for a fit keeps Python busy and threads would take turns.
 
-Every fit of a pool runs in a worker with one thread of linear algebra, so that results do not depend on how many there
-are.
+A fit takes one thread of linear algebra, here as there, so that results do not depend on how many processes there are.
 """
 
 from __future__ import annotations
@@ -54,7 +53,7 @@ class FitPool:
     def __exit__(self, *error: object) -> None:
         for process in self._all:
             process.kill()
-        self._threads.shutdown(wait=True)
+        self._threads.shutdown(wait=True, cancel_futures=True)
         for process in self._all:
             process.wait()
             for stream in (process.stdin, process.stdout):
@@ -64,7 +63,7 @@ class FitPool:
                         stream.close()
 
     def submit(self, profile: Profile) -> Future:
-        """Start a fit; the future yields its FitResult or raises DownwarpError."""
+        """Ask for a fit; the future yields its FitResult or raises DownwarpError, and is cancelled until it starts."""
         return self._threads.submit(self._fit, profile)
 
     def _fit(self, profile: Profile) -> Any:

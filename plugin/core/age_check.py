@@ -11,6 +11,7 @@ from .constants import MYR
 from .cooling import Geotherm
 from .errors import DownwarpError
 from .result import Estimate
+from .wording import say
 
 
 @dataclass(frozen=True)
@@ -47,12 +48,14 @@ def check_age(
     plate, or there is no thickness.
     """
     if thickness.value is None:
-        raise DownwarpError(f"{name}: te_km is empty; the plate's thickness was not resolved.")
+        raise DownwarpError("{name}: te_km is empty; the plate's thickness was not resolved.", name=name)
     check.number("LOAD_AGE_MYR", load_age / MYR, at_least=0)
     if not age > load_age:
         raise DownwarpError(
-            f"{name}: the load is {load_age / MYR:g} Myr old and the plate {age / MYR:.4g} Myr; a load comes later "
-            "than its plate."
+            "{name}: the load is {load_age:g} Myr old and the plate {age:.4g} Myr; a load comes later than its plate.",
+            name=name,
+            load_age=load_age / MYR,
+            age=age / MYR,
         )
     cooled = replace(geotherm, age=age - load_age)
 
@@ -67,11 +70,11 @@ def check_age(
         low, high = min(depths), max(depths)
         if thickness.low is not None and thickness.low > high:
             remarks.append(
-                "thicker than the hottest isotherm of that age is deep: older at loading, or fitted too thick"
+                say("thicker than the hottest isotherm of that age is deep: older at loading, or fitted too thick")
             )
         if thickness.high is not None and thickness.high < low:
             remarks.append(
-                "thinner than the coolest isotherm of that age is deep: reheated, weakened, or fitted too thin"
+                say("thinner than the coolest isotherm of that age is deep: reheated, weakened, or fitted too thin")
             )
     return AgeCheck(name, thickness, age, load_age, cooled, temperature, expected, tuple(remarks))
 

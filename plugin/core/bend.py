@@ -9,13 +9,14 @@ import numpy as np
 from . import check
 from .errors import DownwarpError
 from .forward import TransectModel
-from .mapped import forward_model
+from .load_shape import forward_model
 from .markers import find_markers
 from .plate import CONTINUES
 from .problem import Problem, prepare
 from .profile import Profile
 from .result import Bent, StationValues
 from .settings import BROKEN, CONTINUOUS, MAPPED, FitOptions
+from .wording import say
 from .zones import varying
 
 
@@ -51,8 +52,10 @@ def bend_profile(
         for key, given in (("END_SHEAR", end_shear), ("START_SUPPORT", start), ("FINISH_SUPPORT", finish)):
             if given:
                 raise DownwarpError(
-                    f"{key} is {given:g}, but LOAD_SHAPE is 1 (as mapped), which takes a plate that continues at both "
-                    "ends, without end forces."
+                    "{key} is {given:g}, but LOAD_SHAPE is 1 (as mapped), which takes a plate that continues at both "
+                    "ends, without end forces.",
+                    key=key,
+                    given=given,
                 )
         thickness = _uniform(profile, thickness)
         return _told(bend_problem(problem, model, thickness, break_position, {}, regional), remarks)
@@ -71,8 +74,10 @@ def bend_profile(
     missing = int((~np.isfinite(along[on_plate])).sum())
     if missing:
         raise DownwarpError(
-            f"{profile.name}: the elastic thickness is not known at {missing} of the {int(on_plate.sum())} stations on "
-            "the plate."
+            "{transect}: the elastic thickness is not known at {missing} of the {count} stations on the plate.",
+            transect=profile.name,
+            missing=missing,
+            count=int(on_plate.sum()),
         )
     # What lies before the break carries no plate.
     along = np.interp(profile.distance, profile.distance[on_plate], along[on_plate])
@@ -80,8 +85,12 @@ def bend_profile(
     least, most, mean = (float(of(along[on_plate])) for of in (np.min, np.max, np.mean))
     if most > least:
         remarks += (
-            f"the elastic thickness runs from {least / 1e3:.3g} to {most / 1e3:.3g} km along the plate; the profile's "
-            "thickness, rigidity and flexural parameter are those of its mean",
+            say(
+                "the elastic thickness runs from {least:.3g} to {most:.3g} km along the plate; the profile's "
+                "thickness, rigidity and flexural parameter are those of its mean",
+                least=least / 1e3,
+                most=most / 1e3,
+            ),
         )
     return replace(_told(bent, remarks), thickness=mean)
 
@@ -96,7 +105,8 @@ def _uniform(profile: Profile, thickness: float) -> float:
         return thickness
     if not np.ptp(profile.thickness) == 0:
         raise DownwarpError(
-            f"{profile.name}: LOAD_SHAPE is 1 (as mapped), which takes one elastic thickness all along the line."
+            "{transect}: LOAD_SHAPE is 1 (as mapped), which takes one elastic thickness all along the line.",
+            transect=profile.name,
         )
     return float(profile.thickness[0])
 
@@ -119,7 +129,7 @@ def bend_problem(
     profile, elastic = problem.profile, problem.options.elastic
     values = np.array([forces.get(name, 0.0) for name in model.end_forces])
     model, converged = model.filled(thickness, break_position, values)
-    remarks = () if converged else ("the infill did not converge: it neither fills nor leaves a part of the line",)
+    remarks = () if converged else (say("the infill did not converge: it neither fills nor leaves a part of the line"),)
     bending = model.bend(thickness, break_position, values)
     distance = profile.distance
     on_plate = distance >= bending.plate.nodes[0] - 1e-6

@@ -26,13 +26,14 @@ def corners(
     row, column = np.broadcast_arrays(np.asarray(row, dtype=float), np.asarray(column, dtype=float))
     rows, columns = shape
     reach = 0.5 + _ROUNDING
-    inside = (row >= -reach) & (row <= rows - 1 + reach) & np.isfinite(column)
+    inside = (row >= -reach) & (row <= rows - 1 + reach)
+    inside &= np.isfinite(column) if closed else (column >= -reach) & (column <= columns - 1 + reach)
+    everywhere = bool(inside.all())
+    if not everywhere:
+        row, column = np.where(inside, row, 0.0), np.where(inside, column, 0.0)
+    row = np.minimum(np.maximum(row, 0.0), rows - 1.0)
     if not closed:
-        inside &= (column >= -reach) & (column <= columns - 1 + reach)
-    row = np.clip(np.where(inside, row, 0.0), 0.0, rows - 1)
-    column = np.where(inside, column, 0.0)
-    if not closed:
-        column = np.clip(column, 0.0, columns - 1)
+        column = np.minimum(np.maximum(column, 0.0), columns - 1.0)
     top, left = np.floor(row), np.floor(column)
     down, right = row - top, column - left
     top, left = top.astype(np.int64), left.astype(np.int64)
@@ -42,11 +43,12 @@ def corners(
         next_column = (left + 1) % columns
     else:
         next_column = np.minimum(left + 1, columns - 1)
-    weights = np.stack([(1 - down) * (1 - right), (1 - down) * right, down * (1 - right), down * right])
+    up, here = 1 - down, 1 - right
+    weights = np.stack([up * here, up * right, down * here, down * right])
     return (
         np.stack([top, top, next_row, next_row]),
         np.stack([left, next_column, left, next_column]),
-        np.where(inside, weights, 0.0),
+        weights if everywhere else np.where(inside, weights, 0.0),
     )
 
 
@@ -56,6 +58,8 @@ def blend(values: np.ndarray, weights: np.ndarray) -> np.ndarray:
     ``values`` (NaN where there is no data) and ``weights``, as `corners` gives them: shape (4, *points).
     """
     known = np.isfinite(values)
+    if known.all() and (weights > 0.0).any(axis=0).all():
+        return (weights * values).sum(axis=0) / weights.sum(axis=0)
     known_weights = np.where(known, weights, 0.0)
     total = known_weights.sum(axis=0)
     # A little below a half, so that rounding does not tip an even split.

@@ -2,11 +2,26 @@
 
 from __future__ import annotations
 
+import math
 from typing import Any
 
 import numpy as np
 
 from .errors import DownwarpError
+from .wording import Said, say
+
+_WANTED = {
+    (None, None): say("a number"),
+    ("above", None): say("a number above {above:g}"),
+    ("at_least", None): say("a number from {least:g}"),
+    (None, "below"): say("a number below {below:g}"),
+    (None, "at_most"): say("a number up to {most:g}"),
+    ("above", "below"): say("a number above {above:g} below {below:g}"),
+    ("above", "at_most"): say("a number above {above:g} up to {most:g}"),
+    ("at_least", "below"): say("a number from {least:g} below {below:g}"),
+    ("at_least", "at_most"): say("a number from {least:g} up to {most:g}"),
+}
+"""What a number with a lower and an upper bound is called."""
 
 
 def number(
@@ -19,32 +34,34 @@ def number(
     at_most: float | None = None,
 ) -> float:
     """Return ``value`` as a finite float within the bounds, or raise DownwarpError."""
-    wanted = _bounds(above, at_least, below, at_most)
-    if isinstance(value, (bool, np.bool_)):
-        raise DownwarpError(f"{name} is {value!r}; it takes {wanted}.")
+    is_number = not isinstance(value, (bool, np.bool_))
     try:
-        result = float(value)
+        result = float(value) if is_number else math.nan
     except (TypeError, ValueError):
-        raise DownwarpError(f"{name} is {value!r}; it takes {wanted}.") from None
+        result, is_number = math.nan, False
     inside = (
-        np.isfinite(result)
+        math.isfinite(result)
         and (above is None or result > above)
         and (at_least is None or result >= at_least)
         and (below is None or result < below)
         and (at_most is None or result <= at_most)
     )
     if not inside:
-        raise DownwarpError(f"{name} is {result:g}; it takes {wanted}.")
+        shown = f"{result:g}" if is_number else repr(value)
+        raise DownwarpError(
+            "{name} is {shown}; it takes {wanted}.",
+            name=name,
+            shown=shown,
+            wanted=_bounds(above, at_least, below, at_most),
+        )
     return result
 
 
-def _bounds(above: float | None, at_least: float | None, below: float | None, at_most: float | None) -> str:
-    parts = [
-        f"{word} {bound:g}"
-        for word, bound in (("above", above), ("from", at_least), ("below", below), ("up to", at_most))
-        if bound is not None
-    ]
-    return " ".join(["a number", *parts])
+def _bounds(above: float | None, at_least: float | None, below: float | None, at_most: float | None) -> Said:
+    lower = "above" if above is not None else "at_least" if at_least is not None else None
+    upper = "below" if below is not None else "at_most" if at_most is not None else None
+    bounds = {"above": above, "least": at_least, "below": below, "most": at_most}
+    return say(_WANTED[lower, upper], **{name: bound for name, bound in bounds.items() if bound is not None})
 
 
 def finite_array(name: str, values: Any, ndim: int | None = None) -> np.ndarray:
@@ -52,11 +69,13 @@ def finite_array(name: str, values: Any, ndim: int | None = None) -> np.ndarray:
     try:
         array = np.asarray(values, dtype=float)
     except (TypeError, ValueError):
-        raise DownwarpError(f"{name} must hold numbers only.") from None
+        raise DownwarpError("{name} must hold numbers only.", name=name) from None
     if ndim is not None and array.ndim != ndim:
-        raise DownwarpError(f"{name} has {array.ndim} dimensions; it takes {ndim}.")
+        raise DownwarpError(
+            "{name} has {dimensions} dimensions; it takes {wanted}.", name=name, dimensions=array.ndim, wanted=ndim
+        )
     if not np.isfinite(array).all():
-        raise DownwarpError(f"{name} holds a value that is not a finite number.")
+        raise DownwarpError("{name} holds a value that is not a finite number.", name=name)
     return array
 
 
@@ -64,7 +83,9 @@ def increasing(name: str, values: Any, least: int = 2) -> np.ndarray:
     """Return ``values`` as a strictly increasing finite 1-D array of at least ``least`` numbers."""
     array = finite_array(name, values, ndim=1)
     if array.size < least:
-        raise DownwarpError(f"{name} holds {array.size} values; it takes at least {least}.")
-    if not (np.diff(array) > 0).all():
-        raise DownwarpError(f"{name} must increase from each value to the next.")
+        raise DownwarpError(
+            "{name} holds {count} values; it takes at least {least}.", name=name, count=array.size, least=least
+        )
+    if not (array[1:] > array[:-1]).all():
+        raise DownwarpError("{name} must increase from each value to the next.", name=name)
     return array

@@ -21,6 +21,9 @@ from .settings import (
     REGIONAL_LEVEL,
     FitOptions,
 )
+from .wording import listed, say
+
+Progress = Callable[[float], None]
 
 WINDOW_CHANGE = 0.2
 """Share of the fitted stretch by which the window is shortened, and lengthened where the user had set its end."""
@@ -28,25 +31,30 @@ DENSITY_CHANGE = 100.0
 """Change of infill and load density, kg/m3."""
 OTHER_YOUNG = {100e9: 70e9}
 """Young's modulus, Pa, that is common practice beside the one in use; 100 GPa beside any other."""
-REGIONAL_WORDS = ("none", "level", "level and tilt", "level, tilt and bow")
+REGIONAL_WORDS = (say("none"), say("level"), say("level and tilt"), say("level, tilt and bow"))
 
 
 def try_choices(
-    problem: Problem, best: Fit, fit_kind: Callable[[Problem, int], Fit], progress: Callable[[float], None]
+    problem: Problem, best: Fit, fit_kind: Callable[[Problem, int, Progress], Fit], progress: Progress
 ) -> tuple[ChoiceRow, ...]:
     """One row per alternative; break and change of thickness are held where the answer has them, so that choices differ
     in one thing only.
 
-    ``fit_kind`` fits one kind of plate to a problem. An alternative that cannot be fitted has a row without values.
+    ``fit_kind`` fits one kind of plate to a problem and tells its progress. An alternative that cannot be fitted has a row
+    without values.
     """
-    rows = [ChoiceRow("as fitted", "", best.thickness, best.rms)]
+    rows = [ChoiceRow(say("as fitted"), "", best.thickness, best.rms)]
     alternatives = list(_alternatives(problem, best))
     for done, (choice, option, changes) in enumerate(alternatives):
-        progress(done / len(alternatives))
         kind = changes.pop("plate", best.kind)
+
+        def part(fraction: float, done: int = done) -> None:
+            progress((done + fraction) / len(alternatives))
+
+        part(0.0)
         try:
             changed = prepare(problem.profile, replace(_held(problem, best), plate=kind, **changes))
-            fit = fit_kind(changed, kind)
+            fit = fit_kind(changed, kind, part)
             rows.append(ChoiceRow(choice, option, fit.thickness, fit.rms))
         except DownwarpError:
             rows.append(ChoiceRow(choice, option, Estimate(None), None))
@@ -58,13 +66,20 @@ def moving_choices(rows: tuple[ChoiceRow, ...], best: Fit) -> tuple[str, ...]:
     """A remark that names the choices, but for Young's modulus, that move the thickness outside its interval."""
     low, high = best.thickness.low, best.thickness.high
     # The first row is the answer itself, the last one the modulus.
-    words = [
-        f"{row.choice}, {row.option}: {row.thickness.value / 1e3:.1f} km"
+    moving = [
+        say(
+            "{choice}, {option}: {thickness:.1f} km",
+            choice=row.choice,
+            option=row.option,
+            thickness=row.thickness.value / 1e3,
+        )
         for row in rows[1:-1]
         if row.thickness.value is not None
         and ((low is not None and row.thickness.value < low) or (high is not None and row.thickness.value > high))
     ]
-    return ("choices that move the thickness outside its interval: " + ", ".join(words),) if words else ()
+    if not moving:
+        return ()
+    return (say("choices that move the thickness outside its interval: {choices}", choices=listed(moving)),)
 
 
 def _held(problem: Problem, best: Fit) -> FitOptions:
@@ -83,30 +98,37 @@ def _alternatives(problem: Problem, best: Fit) -> Iterator[tuple[str, str, dict]
     seen = problem.observations().distance
     first, last = float(seen.min()), float(seen.max())
     change = WINDOW_CHANGE * (last - first)
-    yield "window ends sooner", f"FIT_TO {(last - change) / 1e3:.0f} km", {"fit_to": last - change}
-    yield "window begins later", f"FIT_FROM {(first + 0.5 * change) / 1e3:.0f} km", {"fit_from": first + 0.5 * change}
+    yield say("window ends sooner"), f"FIT_TO {(last - change) / 1e3:.0f} km", {"fit_to": last - change}
+    yield (
+        say("window begins later"),
+        f"FIT_FROM {(first + 0.5 * change) / 1e3:.0f} km",
+        {"fit_from": first + 0.5 * change},
+    )
     end = float(problem.profile.distance[-1])
     if options.fit_to is not None and options.fit_to < end:
         further = min(last + change, end)
-        yield "window ends later", f"FIT_TO {further / 1e3:.0f} km", {"fit_to": further}
+        yield say("window ends later"), f"FIT_TO {further / 1e3:.0f} km", {"fit_to": further}
     regional = options.chosen("regional")[0]
     if regional < REGIONAL_BOW:
-        yield "more regional", REGIONAL_WORDS[regional + 1], {"regional": regional + 1}
+        yield say("more regional"), REGIONAL_WORDS[regional + 1], {"regional": regional + 1}
     if regional > REGIONAL_LEVEL:
-        yield "less regional", REGIONAL_WORDS[regional - 1], {"regional": regional - 1}
-    for sign, word in ((1, "denser"), (-1, "lighter")):
+        yield say("less regional"), REGIONAL_WORDS[regional - 1], {"regional": regional - 1}
+    for sign, infill, load in (
+        (1, say("denser infill"), say("denser load")),
+        (-1, say("lighter infill"), say("lighter load")),
+    ):
         if not problem.bare:
             density = rho.infill + sign * DENSITY_CHANGE
             if 0 <= density < rho.mantle:
-                yield f"{word} infill", f"{density:.0f} kg/m3", {"rho_infill": density}
+                yield infill, f"{density:.0f} kg/m3", {"rho_infill": density}
         if np.any(problem.load):
             density = rho.load + sign * DENSITY_CHANGE
             if density > 0:
-                yield f"{word} load", f"{density:.0f} kg/m3", {"rho_load": density}
+                yield load, f"{density:.0f} kg/m3", {"rho_load": density}
     if options.load_shape == MAPPED or options.zones > 1:
         return  # there is only one kind of plate that has them
     other = CONTINUOUS if best.kind == BROKEN else BROKEN
-    yield "other plate", PLATE_NAMES[other], {"plate": other}
+    yield say("other plate"), PLATE_NAMES[other], {"plate": other}
 
 
 def _other_modulus(elastic: Elastic, best: Fit) -> ChoiceRow:
@@ -119,4 +141,4 @@ def _other_modulus(elastic: Elastic, best: Fit) -> ChoiceRow:
             for value in (best.thickness.value, best.thickness.low, best.thickness.high)
         )
     )
-    return ChoiceRow("Young's modulus", f"{young / 1e9:.0f} GPa", scaled, best.rms)
+    return ChoiceRow(say("Young's modulus"), f"{young / 1e9:.0f} GPa", scaled, best.rms)

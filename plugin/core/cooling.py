@@ -33,10 +33,11 @@ from .constants import (
     PLATE_THICKNESS,
 )
 from .errors import DownwarpError
+from .wording import say
 
 HALF_SPACE, PLATE, STEADY = range(3)
 """Kinds of geotherm, in the order of the key THERMAL."""
-KIND_NAMES = ("cooling half-space", "cooling plate", "steady heat flow")
+KIND_NAMES = (say("cooling half-space"), say("cooling plate"), say("steady heat flow"))
 TERMS = 40
 """Terms of the plate's series: the next one is below e^-150 from `YOUNG_PLATE` on."""
 YOUNG_PLATE = 1e-2
@@ -73,7 +74,7 @@ class Geotherm:
 
     def __post_init__(self) -> None:
         if self.kind not in (HALF_SPACE, PLATE, STEADY):
-            raise DownwarpError(f"THERMAL is {self.kind!r}; it takes 0 to 2.")
+            raise DownwarpError("THERMAL is {kind!r}; it takes 0 to 2.", kind=self.kind)
         check.number("SURFACE_C", self.surface, at_least=-100, at_most=500)
         check.number("MANTLE_C", self.mantle, above=self.surface, at_most=3000)
         check.number("DIFFUSIVITY", self.diffusivity, above=0, at_most=1e-3)
@@ -85,8 +86,10 @@ class Geotherm:
             check.number("HEAT_FLOW", self.heat_flow * 1e3, above=0, at_most=1e4)
             if self.heat_flow <= self.production * self.production_depth:
                 raise DownwarpError(
-                    f"HEAT_FLOW is {self.heat_flow * 1e3:g} mW/m2, but HEAT_PRODUCTION and PRODUCTION_KM alone make "
-                    f"{self.production * self.production_depth * 1e3:g}: nothing is left from the mantle."
+                    "HEAT_FLOW is {heat_flow:g} mW/m2, but HEAT_PRODUCTION and PRODUCTION_KM alone make {made:g}: "
+                    "nothing is left from the mantle.",
+                    heat_flow=self.heat_flow * 1e3,
+                    made=self.production * self.production_depth * 1e3,
                 )
         else:
             check.number("AGE_MYR", self.age / MYR, above=0, at_most=1e4)
@@ -171,7 +174,11 @@ def age_of_heat_flow(geotherm: Geotherm, heat_flow: float) -> float:
     low, high = math.log(1e-3 * MYR), math.log(OLDEST * MYR)
     if excess(low) < 0 or excess(high) > 0:
         raise DownwarpError(
-            f"HEAT_FLOW is {heat_flow * 1e3:g} mW/m2, which the {geotherm.name} has at no age up to {OLDEST:g} Myr; "
-            f"its lowest is {replace(geotherm, age=OLDEST * MYR).surface_heat_flow() * 1e3:.4g} mW/m2."
+            "HEAT_FLOW is {heat_flow:g} mW/m2, which the {geotherm} has at no age up to {oldest:g} Myr; its lowest is "
+            "{lowest:.4g} mW/m2.",
+            heat_flow=heat_flow * 1e3,
+            geotherm=geotherm.name,
+            oldest=OLDEST,
+            lowest=replace(geotherm, age=OLDEST * MYR).surface_heat_flow() * 1e3,
         )
     return math.exp(brentq(excess, low, high, xtol=1e-12))

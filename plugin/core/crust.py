@@ -89,7 +89,12 @@ class Section:
         for name in ("relief", "undeflected", "deflection", "infill"):
             values = check.finite_array(name, getattr(self, name), ndim=1)
             if values.shape != self.distance.shape:
-                raise DownwarpError(f"{name} holds {values.size} values; it takes {self.distance.size}.")
+                raise DownwarpError(
+                    "{name} holds {count} values; it takes {stations}.",
+                    name=name,
+                    count=values.size,
+                    stations=self.distance.size,
+                )
 
     @property
     def load_top(self) -> np.ndarray:
@@ -201,7 +206,7 @@ class Anomaly:
 def anomaly(section: Section, crust: Crust, stations, before: int = HELD, shape: int = STRIP) -> Anomaly:
     """Gravity of the bent plate at ``stations`` (m, (n,)); ``before`` and ``shape`` as in `attraction`."""
     if before not in (MIRRORED, HELD, UNDEFLECTED):
-        raise DownwarpError(f"BEFORE is {before!r}; it takes 0 to 2.")
+        raise DownwarpError("BEFORE is {before!r}; it takes 0 to 2.", before=before)
     stations = check.finite_array("stations", stations, ndim=1)
     heights = section.ground(stations)
     parts = {name: np.zeros(stations.shape) for name in (LOAD, SURFACE, MOHO)}

@@ -47,8 +47,10 @@ def restoring_stiffness(rho_mantle, rho_infill, gravity: float):
     stiffness = (np.asarray(rho_mantle, dtype=float) - np.asarray(rho_infill, dtype=float)) * gravity
     if not (stiffness > 0).all():
         raise DownwarpError(
-            f"RHO_MANTLE ({np.min(rho_mantle):g} kg/m3) must exceed the infill density "
-            f"({np.max(rho_infill):g} kg/m3): otherwise nothing restores the plate."
+            "RHO_MANTLE ({mantle:g} kg/m3) must exceed the infill density ({infill:g} kg/m3): otherwise nothing "
+            "restores the plate.",
+            mantle=np.min(rho_mantle),
+            infill=np.max(rho_infill),
         )
     return stiffness
 

@@ -13,7 +13,8 @@ from .choices import moving_choices, try_choices
 from .elastic import flexural_parameter
 from .errors import DownwarpError
 from .forward import TransectModel
-from .mapped import forward_model
+from .load_shape import forward_model
+from .one_thread import one_thread
 from .posterior import DECISIVE, Comparison, Model, Posterior, Surface, compare, thickness_posterior
 from .problem import Observations, Problem, prepare
 from .profile import Profile
@@ -27,10 +28,10 @@ from .settings import (
     LOAD_RELIEF,
     MAPPED,
     MEASURED,
-    PLATE_NAMES,
     FitOptions,
 )
-from .strip_check import check_strip, strip_remarks
+from .uniform import UniformBreak, is_uniform
+from .wording import say
 from .zones import ZoneSearch, search_zones
 
 LEVEL_ROUNDS = 4
@@ -47,19 +48,26 @@ ZONE_CHANGES = (10e3, 150e3)
 lie 20 to 95 km from a trench's axis (Zhang, Lin & Zhou, abstract alone)."""
 MOST_ZONE_STATIONS = 750
 """Stations beyond which trials of two zones would take more than some 1.5 GB of memory."""
+KIND_WORDS = (
+    (say("a continuous plate"), say("a broken plate")),
+    (say("A continuous plate"), say("A broken plate")),
+)
+"""The kinds of plate within a sentence, and where one begins."""
 ZONE_PART = 0.5
 """Part of the fitted plate within which it is sought then, at most."""
 
 Progress = Callable[[float], None]
 
 
+@one_thread()
 def fit_profile(
     profile: Profile, options: FitOptions, progress: Progress | None = None, with_choices: bool = True
 ) -> FitResult:
     """Fit a plate, or both kinds, to a sampled profile.
 
     ``with_choices``: whether the fit is repeated under each reasonable alternative, which takes some ten fits more.
-    Raises DownwarpError where nothing can be fitted, and whatever ``progress`` raises.
+    Raises DownwarpError where nothing can be fitted, and whatever ``progress`` raises. Linear algebra runs on one thread,
+    so that the same profile gives the same bits in any process.
     """
     told = progress if progress is not None else _silent
     tell = functools.partial(_share, told, 0.0, 0.3 if with_choices else 1.0)
@@ -112,8 +120,12 @@ def _bend_left_to_noise(fit: Fit) -> tuple[str, ...]:
     if fit.thickness.value is None or bulge is None or length * 1e3 < alpha or fit.rms < 0.5 * abs(bulge.deflection):
         return ()
     return (
-        f"the fit leaves residuals of {fit.rms:.0f} m, as long as the plate's own bend, beside a bulge of "
-        f"{abs(bulge.deflection):.0f} m: it follows the part next to the break alone; begin the fit farther out (FIT_FROM)",
+        say(
+            "the fit leaves residuals of {rms:.0f} m, as long as the plate's own bend, beside a bulge of {bulge:.0f} "
+            "m: it follows the part next to the break alone; begin the fit farther out (FIT_FROM)",
+            rms=fit.rms,
+            bulge=abs(bulge.deflection),
+        ),
     )
 
 
@@ -127,25 +139,26 @@ def _fit_kinds(problem: Problem, tell: Progress) -> tuple[list[Fit], Comparison 
         fit, posterior = _fit_with_posterior(problem, each, functools.partial(_share, tell, 0.5 * place, 0.5))
         fits.append(fit)
         posteriors.append(posterior)
-    names = f"a {PLATE_NAMES[CONTINUOUS]} plate", f"a {PLATE_NAMES[BROKEN]} plate"
-    comparison = compare(posteriors[0], posteriors[1], names)
+    comparison = compare(posteriors[0], posteriors[1], *KIND_WORDS)
     return (fits if comparison.log_odds >= 0 else fits[::-1]), comparison
 
 
 def _strip_checked(problem: Problem, fit: Fit) -> tuple[str, ...]:
-    """What a fit with a strip must say of it, where it was asked to and the relief about the line is known."""
+    """What a fit with a strip must say of it, where a load bends a continuous plate whose thickness is resolved and the
+    relief about the line is known."""
     options, plan, thickness = problem.options, problem.profile.plan, fit.thickness
     if not options.check_strip or options.load_shape == MAPPED or plan is None:
         return ()
-    if fit.kind != CONTINUOUS:
-        return ("the strip was not checked: the plate is broken",)
-    if thickness.value is None:
-        return ("the strip was not checked: no thickness is resolved",)
+    if fit.kind != CONTINUOUS or thickness.value is None or not problem.load.any():
+        return ()
+    # Here, as in `load_shape`.
+    from .strip_check import check_strip, strip_remarks
+
     try:
         options = replace(options, reference_level=problem.reference_level)
         checked = check_strip(problem.profile, plan, options, thickness.value)
     except DownwarpError as error:
-        return (f"the strip was not checked: {error}",)
+        return (say("the strip was not checked: {why}", why=error.message),)
     return strip_remarks(checked, thickness.low, thickness.high)
 
 
@@ -179,8 +192,9 @@ def _fit_with_posterior(problem: Problem, kind: int, progress: Progress) -> tupl
     seen = problem.observations()
     if seen.distance.size == 0:
         raise DownwarpError(
-            f"{problem.profile.name}: nothing is left to fit; outside the load, beyond the break and within FIT_FROM "
-            "and FIT_TO there is no observed station and no pick."
+            "{transect}: nothing is left to fit; outside the load, beyond the break and within FIT_FROM and FIT_TO "
+            "there is no observed station and no pick.",
+            transect=problem.profile.name,
         )
     stations = problem.profile.distance
     positions = np.concatenate([stations, seen.distance])
@@ -191,15 +205,31 @@ def _fit_with_posterior(problem: Problem, kind: int, progress: Progress) -> tupl
         sigma = np.concatenate([np.full(stations.size, np.nan), sigma])
     searched = problem.breaks.size > 1 and (kind == BROKEN or bool(model.end_forces))
 
+    uniform = UniformBreak(model, positions) if searched and is_uniform(model) else None
+
     def evaluate(thicknesses: np.ndarray, break_position: float | None) -> tuple[np.ndarray, np.ndarray]:
         at = float(problem.breaks[0]) if break_position is None else break_position
+        if uniform is not None:
+            return uniform.columns(thicknesses, at)
         return trial_columns(model, thicknesses, at, positions, seen)
 
     def infer(trials: Model, places: np.ndarray | None, tell: Progress) -> Posterior:
+        reached = 0.0
+
+        def reach(fraction: float) -> None:
+            nonlocal reached
+            reached = fraction
+            tell(fraction)
+
+        def looked_at(thicknesses: np.ndarray, place: float | None) -> tuple[np.ndarray, np.ndarray]:
+            # A search can be stopped before each of its trials, of which some take long.
+            tell(reached)
+            return trials(thicknesses, place)
+
         return thickness_posterior(
             observed,
             positions,
-            trials,
+            looked_at,
             model.regional,
             options.te_from,
             options.te_to,
@@ -210,7 +240,7 @@ def _fit_with_posterior(problem: Problem, kind: int, progress: Progress) -> tupl
             confidence=options.confidence,
             breaks=places,
             robust=options.robust,
-            progress=tell,
+            progress=reach,
         )
 
     def evaluate_zones(zoned: TransectModel, thicknesses: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -225,7 +255,7 @@ def _fit_with_posterior(problem: Problem, kind: int, progress: Progress) -> tupl
             tell = functools.partial(_share, progress, 0.1, 0.9)
             model, posterior, zones = _fit_zones(problem, model, seen, one, infer, evaluate_zones, tell)
     except DownwarpError as error:
-        raise DownwarpError(f"{problem.profile.name}: {error}") from None
+        raise DownwarpError("{transect}: {why}", transect=problem.profile.name, why=error.message) from None
     fit = _as_fit(problem, model, posterior, seen, searched)
     told += () if zones is None else (_zones_remark(zones.log_odds),)
     return replace(fit, remarks=fit.remarks + told, zones=zones), posterior
@@ -248,8 +278,10 @@ def _fit_zones(
     count = problem.profile.distance.size
     if count > MOST_ZONE_STATIONS:
         raise DownwarpError(
-            f"TE_ZONES is 2, which takes at most {MOST_ZONE_STATIONS} stations, but the line has {count}: give a larger "
-            "distance between them (STEP_KM)."
+            "TE_ZONES is 2, which takes at most {most} stations, but the line has {count}: give a larger distance "
+            "between them (STEP_KM).",
+            most=MOST_ZONE_STATIONS,
+            count=count,
         )
     rounds = 0
 
@@ -293,12 +325,16 @@ def zone_range(problem: Problem, seen: Observations) -> tuple[float, float]:
     low = min(ZONE_CHANGES[0], 0.5 * high) if options.zone_from is None else options.zone_from
     if not high < stretch:
         raise DownwarpError(
-            f"ZONE_CHANGE_TO is {high / 1e3:g} km, but what is fitted reaches {stretch / 1e3:.0f} km from the break."
+            "ZONE_CHANGE_TO is {high:g} km, but what is fitted reaches {stretch:.0f} km from the break.",
+            high=high / 1e3,
+            stretch=stretch / 1e3,
         )
     if low > high:
         raise DownwarpError(
-            f"ZONE_CHANGE_FROM is {low / 1e3:g} km, but the change is sought up to {high / 1e3:g} km: give a "
-            "ZONE_CHANGE_TO beyond it."
+            "ZONE_CHANGE_FROM is {low:g} km, but the change is sought up to {high:g} km: give a ZONE_CHANGE_TO beyond "
+            "it.",
+            low=low / 1e3,
+            high=high / 1e3,
         )
     return low, high
 
@@ -316,13 +352,14 @@ def _over_places(posterior: Posterior) -> Surface:
 def _zones_remark(log_odds: float) -> str:
     """Two zones beside one, in words."""
     size = abs(log_odds)
-    odds = f"{np.exp(size):.2g}" if size < 13.8 else "more than a million"
-    words = ("two zones of elastic thickness", "one")
+    odds = f"{np.exp(size):.2g}" if size < 13.8 else say("more than a million")
+    if size < DECISIVE and log_odds > 0:
+        return say("undecided between two zones of elastic thickness and one (odds {odds} to 1 for two)", odds=odds)
     if size < DECISIVE:
-        return f"undecided between {words[0]} and {words[1]} (odds {odds} to 1 for {'two' if log_odds > 0 else 'one'})"
+        return say("undecided between two zones of elastic thickness and one (odds {odds} to 1 for one)", odds=odds)
     if log_odds > 0:
-        return f"{words[0]} are preferred to {words[1]} (odds {odds} to 1)"
-    return f"one zone of elastic thickness is preferred to two (odds {odds} to 1)"
+        return say("two zones of elastic thickness are preferred to one (odds {odds} to 1)", odds=odds)
+    return say("one zone of elastic thickness is preferred to two (odds {odds} to 1)", odds=odds)
 
 
 def complete_sigma(sigma: np.ndarray) -> np.ndarray | None:
@@ -347,14 +384,15 @@ def trial_columns(
     """
     first = break_position if model.kind == BROKEN else -np.inf
     on_plate = np.maximum(positions, first)
-    offsets = np.zeros((thicknesses.size, positions.size))
-    columns = np.zeros((thicknesses.size, positions.size, len(model.end_forces) + model.regional))
+    if model.fill is None:
+        offsets, columns = model.columns(thicknesses, break_position, on_plate)
+    else:
+        parts = [
+            _filled(model, float(each), break_position, seen).columns(each[None], break_position, on_plate)
+            for each in thicknesses
+        ]
+        offsets, columns = (np.concatenate([part[i] for part in parts]) for i in range(2))
     columns[:, :, len(model.end_forces) :] = model.regional_columns(positions)
-    for trial, thickness in enumerate(thicknesses):
-        bent = _filled(model, thickness, break_position, seen) if model.fill is not None else model
-        offset, column = bent.columns(thickness, break_position, on_plate)
-        offsets[trial] = offset
-        columns[trial, :, : len(model.end_forces)] = column[:, : len(model.end_forces)]
     beyond = positions >= first
     offsets[:, ~beyond] = 0.0
     columns[:, ~beyond, : len(model.end_forces)] = 0.0
@@ -368,9 +406,9 @@ def _filled(model: TransectModel, thickness: float, break_position: float, seen:
     if forces.size == 0:
         return bent
     for _ in range(10):
-        offset, columns = bent.columns(thickness, break_position, seen.distance)
-        scale = np.abs(columns).max(axis=0)
-        best = np.linalg.lstsq(columns / scale, seen.elevation - offset, rcond=None)[0] / scale
+        offsets, trials = bent.columns(np.array([thickness]), break_position, seen.distance)
+        scale = np.abs(trials[0]).max(axis=0)
+        best = np.linalg.lstsq(trials[0] / scale, seen.elevation - offsets[0], rcond=None)[0] / scale
         settled = np.allclose(best[: forces.size], forces, rtol=1e-6, atol=0.0)
         forces = best[: forces.size]
         bent, _ = model.filled(thickness, break_position, forces)

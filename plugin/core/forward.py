@@ -21,6 +21,8 @@ from .settings import BROKEN, RHO_AIR
 
 ELEMENTS_PER_ALPHA = 10
 """Elements in a flexural parameter: deflection is then right to some 1e-6 of its largest value."""
+ONE_MESH = 1.6
+"""Ratio of elastic thicknesses, largest over least, of plates that share their nodes: it changes alpha by 1.4."""
 MOST_ELEMENTS = 200_000
 """Elements of a plate: round the Earth at a flexural parameter of a few kilometres."""
 FILL_ROUNDS = 30
@@ -103,7 +105,9 @@ class TransectModel:
         end = float(self.distance[-1])
         if not begin < end:
             raise DownwarpError(
-                f"The break at {break_position / 1e3:g} km leaves no plate before the line's end at {end / 1e3:g} km."
+                "The break at {break_position:g} km leaves no plate before the line's end at {end:g} km.",
+                break_position=break_position / 1e3,
+                end=end / 1e3,
             )
         fixed = np.union1d(self._jumps, self.thickness_jumps(break_position))
         fixed = fixed[(fixed > begin) & (fixed < end)]
@@ -116,26 +120,33 @@ class TransectModel:
         wanted = np.ceil(gaps * (ELEMENTS_PER_ALPHA / alpha))
         if not wanted.sum() <= MOST_ELEMENTS:
             raise DownwarpError(
-                f"A line of {(end - begin) / 1e3:g} km is too long for a plate as thin as {thinnest.min() / 1e3:g} km: "
-                f"that takes {wanted.sum():.3g} elements, and at most {MOST_ELEMENTS} are taken."
+                "A line of {length:g} km is too long for a plate as thin as {thinnest:g} km: that takes "
+                "{elements:.3g} elements, and at most {most} are taken.",
+                length=(end - begin) / 1e3,
+                thinnest=thinnest.min() / 1e3,
+                elements=wanted.sum(),
+                most=MOST_ELEMENTS,
             )
         parts = wanted.astype(int)
         first = np.repeat(fixed[:-1], parts)
         place = np.arange(parts.sum()) - np.repeat(np.cumsum(parts) - parts, parts)
         return np.append(first + place * np.repeat(gaps / parts, parts), end)
 
-    def plate(self, thickness: float, break_position: float, stiffness: np.ndarray | None = None) -> Plate:
-        """The plate of one elastic thickness (m) with its break (m); ``stiffness`` per interval where it differs."""
-        nodes = self.nodes(thickness, break_position)
-        per_interval = self.stiffness if stiffness is None else stiffness
-        if np.ptp(per_interval) == 0:
-            k = np.asarray(per_interval[0])
+    def plate(self, thickness: float, break_position: float) -> Plate:
+        """The plate of one elastic thickness (m) with its break (m)."""
+        return self._plates(np.array([thickness]), break_position)[0]
+
+    def _plates(self, thicknesses: np.ndarray, break_position: float) -> list[Plate]:
+        """The plates of several thicknesses (m), all on the nodes that the thinnest takes."""
+        nodes = self.nodes(float(thicknesses.min()), break_position)
+        if np.ptp(self.stiffness) == 0:
+            k = np.asarray(self.stiffness[0])
         else:
-            k = per_interval[self._interval(0.5 * (nodes[1:] + nodes[:-1]))]
+            k = self.stiffness[self._interval(0.5 * (nodes[1:] + nodes[:-1]))]
         by_kind = FREE_END if self.kind == BROKEN else CONTINUES
         start = by_kind if self.start is None else self.start
-        rigidity = self.rigidity(thickness, break_position, nodes)
-        return Plate(nodes, rigidity, k, self.in_plane, start, self.finish)
+        rigidities = (self.rigidity(each, break_position, nodes) for each in thicknesses.tolist())
+        return [Plate(nodes, rigidity, k, self.in_plane, start, self.finish) for rigidity in rigidities]
 
     def _interval(self, positions: np.ndarray) -> np.ndarray:
         return np.clip(np.searchsorted(self.distance, positions, side="right") - 1, 0, self.distance.size - 2)
@@ -156,22 +167,43 @@ class TransectModel:
         """Powers 0, 1, 2 of distance in m, as many as the regional has coefficients, shape (positions, regional)."""
         return np.asarray(positions, dtype=float)[:, None] ** np.arange(self.regional)
 
-    def columns(self, thickness: float, break_position: float, positions: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Offset (positions,) and columns (positions, p) of the predicted surface, linear in its p coefficients.
+    def columns(
+        self, thicknesses: np.ndarray, break_position: float, positions: np.ndarray
+    ) -> tuple[np.ndarray, np.ndarray]:
+        """Offsets (T, positions) and columns (T, positions, p) of the predicted surface, linear in its p coefficients,
+        for elastic thicknesses (T,), m.
 
-        Coefficients: end shear (N/m), end moment (N), as far as they act; level (m), tilt (m/m), bow (m/m2).
+        Coefficients: end shear (N/m), end moment (N), as far as they act; level (m), tilt (m/m), bow (m/m2). Plates of
+        about one thickness share their nodes, and with them all that does not depend on the thickness.
         """
-        plate = self.plate(thickness, break_position)
-        vector = np.hstack([self._load_vector(plate), self.force_vectors(plate, break_position)])
-        surface = -plate.solve(vector).at(positions)
-        return surface[:, 0], np.hstack([surface[:, 1:], self.regional_columns(positions)])
+        thicknesses = np.asarray(thicknesses, dtype=float)
+        offsets, columns = self._blank(thicknesses.size, positions)
+        place = np.floor(np.log(thicknesses / thicknesses.min()) / np.log(ONE_MESH) + 1e-9)
+        for group in (np.flatnonzero(place == each) for each in np.unique(place)):
+            plates = self._plates(thicknesses[group], break_position)
+            load = self._load_vectors(plates)
+            forces = self.force_vectors(plates[0], break_position)
+            bent = [plate.solve(np.hstack([one, forces])).unknowns for plate, one in zip(plates, load)]
+            surface = -Bending(plates[0], np.hstack(bent)).at(positions)
+            surface = np.moveaxis(surface.reshape(surface.shape[0], group.size, 1 + forces.shape[1]), 0, 1)
+            offsets[group] = surface[:, :, 0]
+            columns[group, :, : forces.shape[1]] = surface[:, :, 1:]
+        return offsets, columns
 
-    def _load_vector(self, plate: Plate) -> np.ndarray:
-        """Nodal forces of the load, (2 n, 1)."""
+    def _blank(self, trials: int, positions: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Offsets of 0, and columns that hold the regional alone, for so many trials."""
+        regional = self.regional_columns(positions)
+        columns = np.zeros((trials, regional.shape[0], len(self.end_forces) + self.regional))
+        columns[:, :, len(self.end_forces) :] = regional
+        return np.zeros(columns.shape[:2]), columns
+
+    def _load_vectors(self, plates: list[Plate]) -> list[np.ndarray]:
+        """Nodal forces of the load on plates that have the same nodes, each (2 n, 1)."""
         if not self.load.any():
-            return np.zeros((2 * plate.nodes.size, 1))
+            return [np.zeros((2 * plates[0].nodes.size, 1))] * len(plates)
         at, load = self._load_knots
-        return plate.load_vector(load, at=at)
+        within = plates[0].load_vector(load, beyond=False, at=at)
+        return [within + plate.beyond_vector(load[:1], load[-1:]) for plate in plates]
 
     @cached_property
     def _load_knots(self) -> tuple[np.ndarray, np.ndarray]:
@@ -228,10 +260,9 @@ class TransectModel:
         return replace(self, stiffness=stiffness, load=self.load - at_stations, fill=None)
 
 
-def infill_stiffness(distance, under_load: np.ndarray, rho_mantle: float, rho_infill: float, rho_under: float, gravity):
-    """k of each interval between stations, Pa/m: rho_under where both its stations lie under the load."""
-    both = under_load[1:] & under_load[:-1]
-    return (rho_mantle - np.where(both, rho_under, rho_infill)) * gravity
+def infill_stiffness(ground_share: np.ndarray, rho_mantle: float, rho_infill: float, rho_under: float, gravity):
+    """k of intervals, Pa/m, of which ``ground_share`` (n,) lies on the load's ground: rho_under there, else rho_infill."""
+    return (rho_mantle - rho_infill - ground_share * (rho_under - rho_infill)) * gravity
 
 
 def fluid_density(reference_level: float | None, rho_water: float) -> float:

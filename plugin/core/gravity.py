@@ -50,7 +50,7 @@ def polygon_attraction(x, z, corners, density: float) -> np.ndarray:
     """
     corners = check.finite_array("corners", corners, ndim=2)
     if corners.shape[0] < 3 or corners.shape[1] != 2:
-        raise DownwarpError(f"corners has shape {corners.shape}; it takes (m, 2) with m from 3.")
+        raise DownwarpError("corners has shape {shape}; it takes (m, 2) with m from 3.", shape=corners.shape)
     x, z = check.finite_array("x", x, ndim=1), check.finite_array("z", z, ndim=1)
     px, pz = corners[:, 0] - x[:, None], z[:, None] - corners[:, 1]
     integral = _edges(px, pz, np.roll(px, -1, axis=1), np.roll(pz, -1, axis=1)).sum(axis=1)
@@ -118,8 +118,10 @@ def series_attraction(top, bottom, spacing: float, density, level: float = 0.0, 
     high, low = max(top.max(), bottom.max()), min(top.min(), bottom.min())
     if not high < level:
         raise DownwarpError(
-            f"The surfaces reach {high:g} m, up to the level of {level:g} m at which gravity is wanted: the series for "
-            "round loads takes surfaces below it; choose the strip model."
+            "The surfaces reach {high:g} m, up to the level of {level:g} m at which gravity is wanted: the series for "
+            "round loads takes surfaces below it; choose the strip model.",
+            high=high,
+            level=level,
         )
     middle = 0.5 * (high + low)
     frequency = (

@@ -12,6 +12,7 @@ from .elastic import Elastic
 from .errors import DownwarpError
 from .joint import JointFit, JointOptions, Readings, joint_fit
 from .stated import PlateStations
+from .wording import say
 
 FREE_AIR, BOUGUER = range(2)
 """Kinds of observed anomaly, in the order of the key ANOMALY_KIND."""
@@ -95,8 +96,10 @@ def check_gravity(
         inside = (readings.distance >= first) & (readings.distance <= last) & np.isfinite(readings.value)
         if inside.sum() < LEAST_READINGS:
             raise DownwarpError(
-                f"{plate.name}: {int(inside.sum())} readings of gravity lie along the plate; it takes at least "
-                f"{LEAST_READINGS}."
+                "{transect}: {count} readings of gravity lie along the plate; it takes at least {least}.",
+                transect=plate.name,
+                count=int(inside.sum()),
+                least=LEAST_READINGS,
             )
         spread = np.full(readings.distance.shape, np.nan) if readings.sigma is None else readings.sigma
         distance, observed, sigma = _merged(distance, readings.distance[inside], readings.value[inside], spread[inside])
@@ -104,7 +107,7 @@ def check_gravity(
     try:
         model = anomaly(section, options.crust, distance, before, options.shape)
     except DownwarpError as error:
-        raise DownwarpError(f"{plate.name}: {error}") from None
+        raise DownwarpError("{transect}: {why}", transect=plate.name, why=error.message) from None
     tell(0.1)
     of_kind = model.bouguer if options.kind == BOUGUER else model.free_air
     used = np.isfinite(observed)
@@ -115,12 +118,16 @@ def check_gravity(
     predicted, rms = of_kind, None
     if readings is not None:
         if used.sum() < LEAST_READINGS:
-            raise DownwarpError(f"{plate.name}: FIT_FROM and FIT_TO leave {int(used.sum())} readings of gravity.")
+            raise DownwarpError(
+                "{transect}: FIT_FROM and FIT_TO leave {count} readings of gravity.",
+                transect=plate.name,
+                count=int(used.sum()),
+            )
         predicted, rms = _with_regional(distance, of_kind, observed, sigma, used, options.regional)
     joint = None
     if readings is not None and options.joint:
         if options.shape != STRIP:
-            remarks += ("no joint fit: the plate bends as a strip, the gravity is of a round load",)
+            remarks += (say("no joint fit: the plate bends as a strip, the gravity is of a round load"),)
         else:
             correction = model.bouguer_correction if options.kind == BOUGUER else 0.0
             own = sigma[used]
@@ -178,15 +185,15 @@ def _joint(plate, section, gravity: Readings, before: int, options: GravityOptio
             lambda part: tell(0.1 + 0.9 * part),
         )
     except DownwarpError as error:
-        raise DownwarpError(f"{plate.name}: {error}") from None
+        raise DownwarpError("{transect}: {why}", transect=plate.name, why=error.message) from None
 
 
 def _joint_remarks(joint: JointFit) -> tuple[str, ...]:
     """Whether surface and gravity agree."""
     found = []
     for what, one, other in (
-        ("elastic thickness", joint.surface.thickness, joint.gravity.thickness),
-        ("density of the load", joint.surface.density, joint.gravity.density),
+        (say("elastic thickness"), joint.surface.thickness, joint.gravity.thickness),
+        (say("density of the load"), joint.surface.density, joint.gravity.density),
     ):
         if one.value is None or other.value is None:
             continue
@@ -195,7 +202,10 @@ def _joint_remarks(joint: JointFit) -> tuple[str, ...]:
         )
         if apart:
             found.append(
-                f"surface and gravity disagree on the {what}: their intervals do not overlap, and the joint one must "
-                "not be trusted"
+                say(
+                    "surface and gravity disagree on the {what}: their intervals do not overlap, and the joint one "
+                    "must not be trusted",
+                    what=what,
+                )
             )
     return tuple(found)

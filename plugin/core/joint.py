@@ -16,9 +16,9 @@ averaged:
     p(g | Te, rho)        from gravity alone, likewise,
     p(y, g | Te, rho) = p(y | Te, rho) p(g | y, Te, rho),
 
-where in the last factor b has the mean and the covariance that the surface leaves it. Noise of surface and gravity is
-taken as independent: rough relief that is neither load nor bending shows in both, and then the joint interval is too
-narrow. Priors are flat in ln Te and in rho over their search ranges.
+where in the last factor b has the mean and the covariance that the surface leaves it, averaged over the noise. Noise of
+surface and gravity is taken as independent: rough relief that is neither load nor bending shows in both, and then the
+joint interval is too narrow. Priors are flat in ln Te and in rho over their search ranges.
 """
 
 from __future__ import annotations
@@ -39,18 +39,26 @@ from .load import relief_load
 from .noise import NoiseFamily, Setting, merge_matrix
 from .result import Estimate
 from .settings import CONTINUOUS, RHO_AIR, Densities
+from .wording import say
 
 THICKNESSES, DENSITIES = 41, 41
 """Trials of each grid."""
-SURFACE, GRAVITY, JOINT = "surface", "gravity", "surface and gravity"
+SURFACE: str = say("surface")
+GRAVITY: str = say("gravity")
+JOINT: str = say("surface and gravity")
 """Sources of evidence."""
-MOST_READINGS = 140
+MOST_READINGS = 100
 """Readings beyond this number are averaged for inference, always as many into one as into the next. Finer ones show how
-smooth the noise is at scales that no plate bends over, and the likelihood would turn on that."""
+smooth the noise is at scales that no plate bends over, and the likelihood would turn on that: noise smoother than the
+families of `noise` then leaves a wider scatter than the interval says (DEVELOPERS.md, inference)."""
 MOST_NODES = 400
 """Corners beyond this number are left out of the bodies while trials are made."""
 FAINT = 10.0
 """ln of the density below its largest value at which a grid ends."""
+FINER = 0.6
+"""Share of a grid below which a density's support is tried again on a finer one."""
+ROUNDS = 6
+"""Grids after the first at most."""
 ONE_LEVEL = 0.1
 """Share of the load's height up to which its reference level and the undeflected surface may differ and still be
 one."""
@@ -160,18 +168,32 @@ class _Data:
     """Readings as inference sees them."""
 
     at: np.ndarray
+    """Mean distance of the readings in each cell that inference sees, m, (n,)."""
+    pairs: np.ndarray
+    """Two places for each cell, with the mean and the spread of its readings, m: first all of the one, then all of the
+    other, (2 n,). A model's mean over them is its mean over the readings but for third derivatives."""
     value: np.ndarray
+    """Mean reading of each cell, (n,)."""
     noise: NoiseFamily
     regional: np.ndarray
     variance: float
     """Of the values about their regional."""
 
+    def average(self, model: np.ndarray) -> np.ndarray:
+        """Values of a model at `pairs` (2 n, ...) as the cells see them, (n, ...)."""
+        return 0.5 * (model[: self.at.size] + model[self.at.size :])
+
 
 def _data(readings: Readings, regional: int, what: str) -> _Data:
-    distance = check.finite_array(f"the distance of the {what}", readings.distance, ndim=1)
+    distance = check.finite_array(say("the distance of the {what}", what=what), readings.distance, ndim=1)
     value = check.finite_array(what, readings.value, ndim=1)
     if distance.size < regional + 5:
-        raise DownwarpError(f"There are {distance.size} values of the {what} to fit; it takes at least {regional + 5}.")
+        raise DownwarpError(
+            "There are {count} values of the {what} to fit; it takes at least {least}.",
+            count=distance.size,
+            what=what,
+            least=regional + 5,
+        )
     order = np.argsort(distance, kind="stable")
     distance, value = distance[order], value[order]
     sigma = None if readings.sigma is None else np.asarray(readings.sigma, dtype=float)[order]
@@ -181,12 +203,20 @@ def _data(readings: Readings, regional: int, what: str) -> _Data:
     at = merge @ distance
     own = None if sigma is None else 1.0 / np.sqrt((merge > 0) @ sigma**-2.0 / (merge > 0).sum(axis=1))
     if at.size < regional + 5:
-        raise DownwarpError(f"The {what} has {at.size} independent values; a fit takes at least {regional + 5}.")
+        raise DownwarpError(
+            "The {what} has {count} independent values; a fit takes at least {least}.",
+            what=what,
+            count=at.size,
+            least=regional + 5,
+        )
     scaled = (at - at.mean()) / max(float(np.ptp(at)), 1.0)
     value, columns = merge @ value, scaled[:, None] ** np.arange(regional)
     about = scaled[:, None] ** np.arange(max(regional, 1))
     left = value - about @ np.linalg.lstsq(about, value, rcond=None)[0]
-    return _Data(at, value, NoiseFamily(at, own), columns, max(float(left @ left) / at.size, 1e-300))
+    noise = NoiseFamily(at, own)
+    spread = np.sqrt(np.maximum(merge @ (distance - distance[0]) ** 2 - (at - distance[0]) ** 2, 0.0))
+    pairs = np.concatenate([at - spread, at + spread])
+    return _Data(at, pairs, value, noise, columns, max(float(left @ left) / at.size, 1e-300))
 
 
 class _Problem:
@@ -226,18 +256,23 @@ class _Problem:
             section.deflection[picked], section.infill[picked], section.under_load[picked], section.level,
         )  # fmt: skip
 
-        self.heights = section.ground(gravity.at)
+        self.heights = section.ground(gravity.pairs)
         # The load's attraction is linear in its density, and the same in all trials.
         at_two = [
-            sum(
-                attraction(body, gravity.at, self.heights, options.before)
-                for body in bodies(self.coarse, replace(crust, load=rho))
-                if body.name == LOAD
+            gravity.average(
+                sum(
+                    (
+                        attraction(body, gravity.pairs, self.heights, options.before)
+                        for body in bodies(self.coarse, replace(crust, load=rho))
+                        if body.name == LOAD
+                    ),
+                    np.zeros(gravity.pairs.shape),
+                )
             )
             for rho in (1000.0, 2000.0)
         ]
         level = np.full(self.coarse.distance.shape, section.level)
-        self.ground = self._sheet(level) @ self.coarse.under_load.astype(float)
+        self.ground = gravity.average(self._sheet(level) @ self.coarse.under_load.astype(float))
         self.unit_load = (at_two[1] - at_two[0]) / 1000.0, 2.0 * at_two[0] - at_two[1]
 
     def deflections(self, thickness: float) -> tuple[np.ndarray, np.ndarray]:
@@ -249,7 +284,7 @@ class _Problem:
             plate.load_vector(self.load, at=self.section.distance), self.model.force_vectors(plate, start),
         ])  # fmt: skip
         bending = plate.solve(vector)
-        return bending.at(self.surface.at), bending.at(self.coarse.distance)
+        return self.surface.average(bending.at(self.surface.pairs)), bending.at(self.coarse.distance)
 
     def by_shared(self, deflections: np.ndarray, rho: float) -> np.ndarray:
         """Deflection, m, by each shared parameter, (n, p): the level, where it is one, then end forces."""
@@ -268,16 +303,17 @@ class _Problem:
         section, crust = self.coarse, self.crust
         by_shared = self.by_shared(deflections, rho)
         deflection = deflections[:, 0] * rho + deflections[:, 1] + by_shared @ shared
-        found = np.zeros(self.gravity.at.shape)
+        at_pairs = np.zeros(self.gravity.pairs.shape)
         for body in bodies(section.bent(deflection), crust):
             if body.name != LOAD:
-                found = found + attraction(body, self.gravity.at, self.heights, self.options.before)
+                at_pairs += attraction(body, self.gravity.pairs, self.heights, self.options.before)
+        found = self.gravity.average(at_pairs)
         slope = np.zeros((found.size, self.shared))
         if self.shared:
             sunk = section.undeflected - deflection
             top = self._sheet(sunk) * (section.infill - crust.crust)
             base = self._sheet(sunk - crust.thickness) * (crust.crust - crust.mantle)
-            slope = (top + base) @ by_shared
+            slope = self.gravity.average((top + base) @ by_shared)
         if self.level_free:
             slope[:, 0] -= (rho - self.fluid) * self.ground
             found = found - (rho - self.fluid) * self.ground * shared[0]
@@ -286,8 +322,8 @@ class _Problem:
         return found, slope
 
     def _sheet(self, height) -> np.ndarray:
-        """Attraction of sheets of 1 kg/m2 about the bodies' corners, (m, corners)."""
-        return sheet_matrix(self.gravity.at, self.heights, self.coarse.distance, height)
+        """Attraction at the pairs of gravity's cells of sheets of 1 kg/m2 about the bodies' corners, (2 n, corners)."""
+        return sheet_matrix(self.gravity.pairs, self.heights, self.coarse.distance, height)
 
 
 def _gram(data: _Data, setting: Setting, whiten, columns: np.ndarray) -> tuple[np.ndarray, float]:
@@ -318,8 +354,8 @@ def _basis(stacked: np.ndarray) -> np.ndarray:
 
 
 def _likelihood(data: _Data, z: np.ndarray, columns: np.ndarray, held: _Held | None = None) -> tuple[np.ndarray, _Held]:
-    """ln likelihood of trials, (M,), and what is left of the columns' coefficients under the noise that suits the best
-    trial: ``z`` = value less offset (M, n), ``columns`` (M, n, p); see the module.
+    """ln likelihood of trials, (M,), and what is left of the columns' coefficients, averaged over the noise: ``z`` = value
+    less offset (M, n), ``columns`` (M, n, p); see the module.
 
     With ``held`` the coefficients have that mean and precision beforehand, their size relative to the noise taken from
     the best trial without.
@@ -339,7 +375,7 @@ def _likelihood(data: _Data, z: np.ndarray, columns: np.ndarray, held: _Held | N
     if p:
         own = _products(held_by_basis, plain.T @ plain)[:, 1:, 1:]
         prior = 0.5 * np.linalg.slogdet(own)[1] - 0.5 * p * np.log(2.0 * np.pi * count * data.variance)
-    total, best, left = [], -np.inf, _Held(np.zeros((trials, p)), np.zeros((trials, p, p)))
+    total, coefficients, spreads = [], [], []
     for factor in data.noise.factors():
         gram, level = _gram(data, factor.setting, factor.whiten, basis)
         product = _products(held_by_basis, gram)
@@ -352,6 +388,9 @@ def _likelihood(data: _Data, z: np.ndarray, columns: np.ndarray, held: _Held | N
             size_squared = residual.min() / max(freedom - p, 1)
             if held is None:
                 square = residual
+                coefficients.append(solved)
+                size_of_each = residual / max(freedom - p - 2, 1)
+                spreads.append(size_of_each[:, None, None] * np.linalg.inv(inner))
                 base = base + prior - 0.5 * np.linalg.slogdet(inner)[1]
                 freedom -= p
             else:
@@ -364,10 +403,20 @@ def _likelihood(data: _Data, z: np.ndarray, columns: np.ndarray, held: _Held | N
         square = np.maximum(square, 1e-300)
         one = base + gammaln(0.5 * freedom) - 0.5 * freedom * np.log(np.pi * square)
         total.append(one)
-        if p and held is None and one.max() > best:
-            best = float(one.max())
-            left = _Held(solved / scale, inner * (scale[:, None] * scale) / size_squared)
-    return logsumexp(total, axis=0), left
+    found = logsumexp(total, axis=0)
+    if not coefficients:
+        return found, _Held(np.zeros((trials, p)), np.zeros((trials, p, p)))
+    weight = np.exp(np.array(total) - found)
+    return found, _left(weight, np.array(coefficients) / scale, np.array(spreads) / np.outer(scale, scale))
+
+
+def _left(weight: np.ndarray, mean: np.ndarray, spread: np.ndarray) -> _Held:
+    """Mean and precision of coefficients of which each noise setting S says mean (S, M, p) and covariance (S, M, p, p),
+    under the weights (S, M) of the settings: covariance within them and between them."""
+    middle = np.einsum("sm,smp->mp", weight, mean)
+    apart = mean - middle
+    covariance = np.einsum("sm,smpq->mpq", weight, spread + apart[..., :, None] * apart[..., None, :])
+    return _Held(middle, np.linalg.inv(covariance))
 
 
 def _products(columns: np.ndarray, gram: np.ndarray) -> np.ndarray:
@@ -378,7 +427,13 @@ def _products(columns: np.ndarray, gram: np.ndarray) -> np.ndarray:
 class _Trials:
     """Likelihoods of one grid of trials."""
 
-    def __init__(self, problem: _Problem, log_te: np.ndarray, rho: np.ndarray) -> None:
+    def __init__(
+        self,
+        problem: _Problem,
+        log_te: np.ndarray,
+        rho: np.ndarray,
+        wanted: tuple[str, ...] = (SURFACE, GRAVITY, JOINT),
+    ) -> None:
         self.log_te, self.rho = log_te, rho
         surface, gravity, p = problem.surface, problem.gravity, problem.shared
         count, many = log_te.size, rho.size
@@ -395,6 +450,10 @@ class _Trials:
         flat = count * many
         self.surface_z, self.surface_columns = z.reshape(flat, -1), columns.reshape(flat, surface.at.size, p)
         of_surface, held = _likelihood(surface, self.surface_z, self.surface_columns)
+        shape = (count, many)
+        self.log = {SURFACE: of_surface.reshape(shape)}
+        if wanted == (SURFACE,):
+            return
         mean = held.mean.reshape(count, many, p)
         # Gravity bends so little in rho that three values of it tell the rest.
         some = np.unique([0, many // 2, many - 1])
@@ -410,26 +469,38 @@ class _Trials:
         slope = np.einsum("kj,ijnp->iknp", weights, slopes)
         self.gravity_z = (gravity.value - offset).reshape(flat, -1)
         self.gravity_columns = slope.reshape(flat, gravity.at.size, p)
-        shape = (count, many)
-        of_gravity = _likelihood(gravity, self.gravity_z, self.gravity_columns)[0]
-        given_surface = of_gravity
-        if p:
-            given_surface = _likelihood(gravity, self.gravity_z, self.gravity_columns, held)[0]
-        self.log = {
-            SURFACE: of_surface.reshape(shape),
-            GRAVITY: of_gravity.reshape(shape),
-            JOINT: (of_surface + given_surface).reshape(shape),
-        }
+        if GRAVITY in wanted:
+            self.log[GRAVITY] = _likelihood(gravity, self.gravity_z, self.gravity_columns)[0].reshape(shape)
+        if JOINT in wanted:
+            given_surface = _likelihood(gravity, self.gravity_z, self.gravity_columns, held if p else None)[0]
+            self.log[JOINT] = (of_surface + given_surface).reshape(shape)
 
-    def support(self, source: str) -> tuple[float, float, float, float]:
-        """Range of ln Te and rho outside which a source's density is faint."""
+    def finer(self, source: str, te_limits: np.ndarray, rho_limits: np.ndarray) -> tuple[np.ndarray, np.ndarray] | None:
+        """Grids of ln Te and rho, as large as these, where a source's density is not faint; None where these will do."""
         log = self.log[source] - self.log[source].max()
-        ranges: list[float] = []
-        for values, profile in ((self.log_te, log.max(axis=1)), (self.rho, log.max(axis=0))):
-            near = np.flatnonzero(profile > -FAINT)
-            low, high = max(int(near[0]) - 1, 0), min(int(near[-1]) + 1, values.size - 1)
-            ranges += [float(values[low]), float(values[high])]
-        return ranges[0], ranges[1], ranges[2], ranges[3]
+        grids, wanted = [], False
+        for values, profile, limits in (
+            (self.log_te, log.max(axis=1), te_limits), (self.rho, log.max(axis=0), rho_limits),
+        ):  # fmt: skip
+            low, high = _support(values, profile, limits)
+            wanted |= high - low < FINER * np.ptp(values) or low < values[0] or high > values[-1]
+            grids.append(np.linspace(low, high, values.size))
+        return (grids[0], grids[1]) if wanted else None
+
+
+def _support(values: np.ndarray, profile: np.ndarray, limits: np.ndarray) -> tuple[float, float]:
+    """Range within limits outside which ln density over its peak, ``profile``, is faint.
+
+    Where it is not faint at an end of the grid, the range goes on beyond by half the grid: a coarser grid may have met a
+    narrow density beside its peak.
+    """
+    if values.size == 1:
+        return float(values[0]), float(values[0])
+    near = np.flatnonzero(profile > -FAINT)
+    step, beyond = values[1] - values[0], 0.5 * np.ptp(values)
+    low = values[near[0]] - (beyond if near[0] == 0 else step)
+    high = values[near[-1]] + (beyond if near[-1] == values.size - 1 else step)
+    return float(max(low, limits[0])), float(min(high, limits[1]))
 
 
 def _lagrange(x: np.ndarray, nodes: np.ndarray) -> np.ndarray:
@@ -459,14 +530,15 @@ def joint_fit(
     tell = progress if progress is not None else (lambda fraction: None)
     problem = _Problem(
         section, crust, options,
-        _data(surface, options.regional, "bent surface"),
+        _data(surface, options.regional, say("bent surface")),
         _data(gravity, options.gravity_regional, "gravity"),
     )  # fmt: skip
     weigh = bool(section.under_load.any()) and bool(problem.load[:, 0].any())
     if weigh and options.rho_from <= crust.water:
         raise DownwarpError(
-            f"RHO_LOAD_FROM ({options.rho_from:g} kg/m3) must exceed RHO_WATER ({crust.water:g} kg/m3), which it "
-            "displaces."
+            "RHO_LOAD_FROM ({rho_from:g} kg/m3) must exceed RHO_WATER ({water:g} kg/m3), which it displaces.",
+            rho_from=options.rho_from,
+            water=crust.water,
         )
     rho = np.linspace(options.rho_from, options.rho_to, DENSITIES) if weigh else np.array([crust.load])
     limits = np.log([options.te_from, options.te_to])
@@ -475,14 +547,11 @@ def joint_fit(
     answers, last = {}, first
     for part, source in enumerate((SURFACE, GRAVITY, JOINT), 1):
         trials = first
-        for _ in range(3):
-            low, high, rho_low, rho_high = trials.support(source)
-            narrow = high - low < 0.6 * np.ptp(trials.log_te)
-            narrow |= weigh and rho_high - rho_low < 0.6 * np.ptp(trials.rho)
-            if not narrow:
+        for _ in range(ROUNDS):
+            grids = trials.finer(source, limits, rho[[0, -1]])
+            if grids is None:
                 break
-            finer = np.linspace(rho_low, rho_high, DENSITIES) if weigh else rho
-            trials = _Trials(problem, np.linspace(low, high, THICKNESSES), finer)
+            trials = _Trials(problem, *grids, (source,))
         answers[source], last = _answer(source, trials, problem, limits, weigh), trials
         tell(0.25 + 0.25 * part)
     predicted, _ = _at_mode(last, problem.gravity, last.gravity_z, last.gravity_columns, JOINT)

@@ -18,8 +18,10 @@ from pyproj import Geod
 from scipy.spatial import cKDTree
 
 from . import check
+from .by_pyproj import in_shape
 from .errors import DownwarpError
 from .transect import Transect
+from .wording import listed, say
 
 LEFT_TO_RIGHT, RIGHT_TO_LEFT = range(2)
 """Sides, in the order of the key SIDE: which way a transect crosses the guide as seen along it."""
@@ -64,16 +66,27 @@ class LaidTransect:
         """What should be known about this transect, in words; empty where there is nothing. Numbers count from 1."""
         parts = []
         if abs(self.turned) >= 0.5:
-            side = "clockwise" if self.turned > 0 else "anticlockwise"
-            words = f"turned {abs(self.turned):.0f} degrees {side} so that it crosses no other transect"
-            if abs(self.turned) >= _OBLIQUE:
-                words += ", hence oblique to the front: widths along it are stretched, and a plate seems thicker"
+            told = {"degrees": abs(self.turned), "side": say("clockwise") if self.turned > 0 else say("anticlockwise")}
+            if abs(self.turned) < _OBLIQUE:
+                words = say("turned {degrees:.0f} degrees {side} so that it crosses no other transect", **told)
+            else:
+                words = say(
+                    "turned {degrees:.0f} degrees {side} so that it crosses no other transect, hence oblique to the "
+                    "front: widths along it are stretched, and a plate seems thicker",
+                    **told,
+                )
             parts.append(words)
         if self.crosses:
             shown = ", ".join(str(index + 1) for index in self.crosses[:5])
-            more = f" and {len(self.crosses) - 5} more" if len(self.crosses) > 5 else ""
-            parts.append(f"crosses transect {shown}{more}: the front bends more sharply than the transects are long")
-        return "; ".join(parts)
+            more = say(" and {count} more", count=len(self.crosses) - 5) if len(self.crosses) > 5 else ""
+            parts.append(
+                say(
+                    "crosses transect {shown}{more}: the front bends more sharply than the transects are long",
+                    shown=shown,
+                    more=more,
+                )
+            )
+        return listed(parts, "; ")
 
 
 def lay_across(
@@ -104,12 +117,17 @@ def lay_across(
     if before + after <= 0:
         raise DownwarpError("BEFORE_KM and AFTER_KM are both 0: the transects would have no length.")
     if side not in (LEFT_TO_RIGHT, RIGHT_TO_LEFT):
-        raise DownwarpError(f"SIDE is {side!r}; it takes 0 (left to right) or 1 (right to left).")
+        raise DownwarpError("SIDE is {side!r}; it takes 0 (left to right) or 1 (right to left).", side=side)
     count = np.floor(guide.length / spacing + 1e-9) + 1
     if count > MOST_TRANSECTS:
         raise DownwarpError(
-            f"SPACING_KM is {spacing / 1e3:g}: the guide {guide.name} of {guide.length / 1e3:.1f} km would get "
-            f"{count:.0f} transects; it may get {MOST_TRANSECTS}."
+            "SPACING_KM is {spacing:g}: the guide {guide} of {length:.1f} km would get {count:.0f} transects; it may "
+            "get {most}.",
+            spacing=spacing / 1e3,
+            guide=guide.name,
+            length=guide.length / 1e3,
+            count=count,
+            most=MOST_TRANSECTS,
         )
     strike = _Strike(guide, np.arange(int(count)) * spacing)
     across = 90.0 if side == LEFT_TO_RIGHT else -90.0
@@ -139,12 +157,14 @@ def lay_round(
     >>> [transect.azimuth for transect in lay_round(10.0, 50.0, Geod(ellps="WGS84"), 4, 200e3)]
     [0.0, 90.0, 180.0, 270.0]
     """
-    longitude = check.number("longitude of the centre", longitude)
-    latitude = check.number("latitude of the centre", latitude, above=-90, below=90)
+    longitude = check.number(say("longitude of the centre"), longitude)
+    latitude = check.number(say("latitude of the centre"), latitude, above=-90, below=90)
     if check.number("DIRECTIONS", directions, at_least=1, at_most=MOST_TRANSECTS) != int(directions):
-        raise DownwarpError(f"DIRECTIONS is {directions:g}; it takes a whole number.")
+        raise DownwarpError("DIRECTIONS is {directions:g}; it takes a whole number.", directions=directions)
     radius = check.number("RADIUS_KM", radius / 1e3, above=0, at_most=_LONGEST / 1e3) * 1e3
-    azimuth = (check.number("first direction", first) + np.arange(int(directions)) * 360.0 / int(directions)) % 360.0
+    azimuth = (
+        check.number(say("first direction"), first) + np.arange(int(directions)) * 360.0 / int(directions)
+    ) % 360.0
     reach = _cut(radius)
     place = np.full(azimuth.size, longitude), np.full(azimuth.size, latitude)
     lines = _along_geodesics(ellipsoid, *place, azimuth, reach)
@@ -160,7 +180,7 @@ class _Strike:
 
     def __init__(self, guide: Transect, along: np.ndarray) -> None:
         longitude, latitude = guide.vertices.T
-        start, back, length = guide.ellipsoid.inv(longitude[:-1], latitude[:-1], longitude[1:], latitude[1:])
+        start, back, length = in_shape(guide.ellipsoid.inv, longitude[:-1], latitude[:-1], longitude[1:], latitude[1:])
         self.along = along
         self.ellipsoid = guide.ellipsoid
         self._knots = guide.vertex_distances
@@ -171,7 +191,7 @@ class _Strike:
         self._twice = np.concatenate([[0.0], np.cumsum(steps)])
         leg = self._leg(along)
         into = along - self._knots[leg]
-        at, self.latitude, behind = guide.ellipsoid.fwd(longitude[leg], latitude[leg], start[leg], into)
+        at, self.latitude, behind = in_shape(guide.ellipsoid.fwd, longitude[leg], latitude[leg], start[leg], into)
         self.longitude = at + 360.0 * np.round((longitude[leg] - at) / 360.0)
         self._azimuth = behind + 180.0
         self._own = self._unit[leg]
@@ -262,7 +282,7 @@ def _crossings(strike: _Strike, azimuth: np.ndarray, before: float, after: float
     ends = []
     for distance in (-before, after):
         along = np.full(azimuth.size, distance)
-        longitude, latitude, _ = strike.ellipsoid.fwd(strike.longitude, strike.latitude, azimuth, along)
+        longitude, latitude, _ = in_shape(strike.ellipsoid.fwd, strike.longitude, strike.latitude, azimuth, along)
         ends.append(_on_unit_sphere(longitude, latitude))
     start, finish = ends
     middle = start + finish
@@ -300,7 +320,7 @@ def _along_geodesics(ellipsoid: Geod, longitude, latitude, azimuth, reach: np.nd
         np.broadcast_to(values, shape).ravel()
         for values in (longitude[:, None], latitude[:, None], azimuth[:, None], reach)
     )
-    there, up, _ = ellipsoid.fwd(origin, *rest)
+    there, up, _ = in_shape(ellipsoid.fwd, origin, *rest)
     there = np.unwrap(np.reshape(there, shape), period=360.0, axis=1)
     base = int(np.argmin(np.abs(reach)))
     there += 360.0 * np.round((longitude - there[:, base]) / 360.0)[:, None]

@@ -21,7 +21,7 @@ from .errors import DownwarpError
 from .forward import TransectModel
 from .plan import PlanRelief, mapped_load
 from .problem import Problem
-from .settings import CONTINUOUS, MAPPED
+from .settings import CONTINUOUS
 from .sheet import SheetLine
 
 
@@ -97,11 +97,15 @@ class MappedModel(TransectModel):
             raise DownwarpError("The load as mapped must have a place for each station.")
         return self.line
 
-    def columns(self, thickness: float, break_position: float, positions: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Offset (positions,) and the regional's columns (positions, p), as `TransectModel.columns`."""
-        deflection = self._sheet.deflection(float(self.elastic.rigidity(thickness)), float(self.stiffness[0]))
-        offset = -CubicSpline(self.distance, deflection)(np.asarray(positions, dtype=float))
-        return offset, self.regional_columns(positions)
+    def columns(
+        self, thicknesses: np.ndarray, break_position: float, positions: np.ndarray
+    ) -> tuple[np.ndarray, np.ndarray]:
+        """Offsets (T, positions) and the regional's columns (T, positions, p), as `TransectModel.columns`."""
+        offsets, columns = self._blank(len(thicknesses), positions)
+        for trial, thickness in enumerate(thicknesses):
+            deflection = self._sheet.deflection(float(self.elastic.rigidity(thickness)), float(self.stiffness[0]))
+            offsets[trial] = -CubicSpline(self.distance, deflection)(np.asarray(positions, dtype=float))
+        return offsets, columns
 
     def bend(self, thickness: float, break_position: float, forces: np.ndarray) -> MappedBending:  # type: ignore[override]
         """The deflection on the line of a plate of one thickness, m."""
@@ -124,17 +128,3 @@ def mapped_model(problem: Problem, plan: PlanRelief) -> tuple[MappedModel, tuple
     line, remarks = mapped_load(problem, plan)
     model = problem.model(CONTINUOUS)
     return MappedModel(**{each.name: getattr(model, each.name) for each in fields(TransectModel)}, line=line), remarks
-
-
-def forward_model(problem: Problem, kind: int) -> tuple[TransectModel, tuple[str, ...]]:
-    """The forward model of a continuous or a broken plate with the load in the shape that was asked for, and remarks.
-
-    Raises DownwarpError as `mapped_model` does, and where the profile holds no relief about the line.
-    """
-    if problem.options.load_shape != MAPPED:
-        return problem.model(kind), ()
-    if problem.profile.plan is None:
-        raise DownwarpError(
-            f"{problem.profile.name}: LOAD_SHAPE is 1 (as mapped), but no relief about the line is known."
-        )
-    return mapped_model(problem, problem.profile.plan)

@@ -5,7 +5,6 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.optimize import brentq
 
 from .plate import Bending
 
@@ -31,6 +30,11 @@ class Markers:
 
 SUBDIVISIONS = 8
 """Points looked at within each element before roots are refined."""
+_THIRDS = np.arange(4) / 3.0
+_CUBIC = np.linalg.inv(np.vander(_THIRDS))
+"""From the values of a cubic at these parts of a span to its coefficients there, highest power first."""
+_HALVINGS = 60
+"""Of a span, after which its ends are neighbouring numbers."""
 
 
 def find_markers(bending: Bending) -> Markers:
@@ -64,9 +68,25 @@ def _extreme(bending: Bending, points: np.ndarray, slope: np.ndarray, near: int)
     """The zero of slope in the two spans beside a point, None where there is none (a free end)."""
     for left in (near - 1, near):
         if 0 <= left < points.size - 1 and slope[left] * slope[left + 1] <= 0 and slope[left] != slope[left + 1]:
-            root = brentq(lambda x: bending.at([x], 1)[0, 0], points[left], points[left + 1])
-            return _value(bending, root)
+            return _value(bending, _root(bending, points[left], points[left + 1], 1))
     return None
+
+
+def _root(bending: Bending, left: float, right: float, derivative: int = 0) -> float:
+    """Where w or its slope changes sign in a span within one element, where it is a cubic: by halving."""
+    values = bending.at(left + (right - left) * _THIRDS, derivative)[:, 0]
+    cubic, square, line, start = (_CUBIC @ values).tolist()
+    if values[0] == 0.0 or values[3] == 0.0:
+        return float(left if values[0] == 0.0 else right)
+    low, high = 0.0, 1.0
+    for _ in range(_HALVINGS):
+        middle = 0.5 * (low + high)
+        at_middle = ((cubic * middle + square) * middle + line) * middle + start
+        if (at_middle < 0.0) == (values[0] < 0.0):
+            low = middle
+        else:
+            high = middle
+    return float(left + (right - left) * low)
 
 
 def _outward(bending, points, sunk, slope, top, direction) -> tuple[Place | None, Place | None]:
@@ -77,8 +97,7 @@ def _outward(bending, points, sunk, slope, top, direction) -> tuple[Place | None
         return None, None
     after = path[outside[0]]
     before = after - direction
-    root = brentq(lambda x: bending.at([x])[0, 0], *sorted((points[before], points[after])))
-    node = Place(float(root), 0.0)
+    node = Place(_root(bending, *sorted((points[before], points[after]))), 0.0)
     beyond = path[outside[0] :]
     rising = np.nonzero(np.diff(sunk[beyond]) > 0)[0]
     if rising.size == 0 or sunk[beyond[rising[0]]] >= 0:

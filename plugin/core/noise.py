@@ -105,7 +105,7 @@ class NoiseFamily:
         self.distance = check.finite_array("distance", distance, ndim=1)
         n = self.distance.size
         if n < 3:
-            raise DownwarpError(f"There are {n} stations to fit; it takes at least 3.")
+            raise DownwarpError("There are {n} stations to fit; it takes at least 3.", n=n)
         ones = np.ones(n)
         self.sigma = ones if sigma is None else _positive("sigma", sigma, n)
         self.known_error = check.number("known_error", known_error, at_least=0)
@@ -154,7 +154,7 @@ class NoiseFamily:
         if setting.family == 0:
             return np.diag(own)
         matrix = (self._correlated(setting) if correlated is None else correlated) * (1.0 - setting.white_share)
-        matrix[np.diag_indices_from(matrix)] += own
+        matrix.flat[:: own.size + 1] += own
         return matrix
 
     def _correlated(self, setting: Setting) -> np.ndarray:
@@ -172,7 +172,8 @@ class NoiseFamily:
                 if setting.family and (setting.family, setting.length) != shape:
                     shape, correlated = (setting.family, setting.length), self._correlated(setting)
                 matrix = self.covariance(setting, correlated)
-                lower, info = dpotrf(matrix, lower=1, clean=0, overwrite_a=1)
+                # Turned, for LAPACK's order of columns: it would copy it otherwise, and it is symmetric.
+                lower, info = dpotrf(matrix.T, lower=1, clean=0, overwrite_a=1)
                 if info != 0:
                     raise DownwarpError("The noise covariance is singular: too many stations share one place.")
                 factor = Factor(setting, lower, 2.0 * float(np.log(lower[diagonal, diagonal]).sum()))
@@ -183,9 +184,11 @@ class NoiseFamily:
 def _positive(name: str, values, n: int) -> np.ndarray:
     array = check.finite_array(name, values, ndim=1)
     if array.size != n:
-        raise DownwarpError(f"{name} holds {array.size} values; it takes {n}, one for each station.")
+        raise DownwarpError(
+            "{name} holds {count} values; it takes {n}, one for each station.", name=name, count=array.size, n=n
+        )
     if not (array > 0).all():
-        raise DownwarpError(f"{name} must be above 0 at every station.")
+        raise DownwarpError("{name} must be above 0 at every station.", name=name)
     return array
 
 

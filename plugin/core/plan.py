@@ -19,11 +19,13 @@ from scipy.ndimage import maximum_filter
 from scipy.spatial import cKDTree
 
 from . import check
+from .by_pyproj import in_shape
 from .errors import DownwarpError
 from .load import CREST_SHARE, relief_load
 from .problem import Problem
 from .settings import LOAD_NONE, LOAD_RELIEF
 from .sheet import LEAST_PAD, Sheet, SheetLine, tapered
+from .wording import say
 
 DISTORTION_LIMIT = 0.005
 """Largest error of scale in the window, 1."""
@@ -45,6 +47,8 @@ MOST_CELLS = 2_000_000
 """Cells that a window may have."""
 MOST_REFINEMENT = 4
 """Places, along each side of a cell, at which relief is read at most."""
+CHECK_CELLS, CHECK_REFINEMENT = 40_000, 2
+"""The same where no more than the strip of every fit is checked, which must not take longer than the fit."""
 _LOOKS = 24
 """Places along each side of the window at which the scale is looked at."""
 _BEYOND = 1e7
@@ -69,10 +73,10 @@ class Plane:
     def from_degrees(self, longitude, latitude) -> tuple[np.ndarray, np.ndarray]:
         """u and v, m, of places in degrees, shaped like them."""
         longitude, latitude = np.asarray(longitude, dtype=float), np.asarray(latitude, dtype=float)
-        x, y = (np.atleast_1d(values) for values in self.projection(longitude.ravel(), latitude.ravel()))
+        x, y = in_shape(self.projection, longitude.ravel(), latitude.ravel())
         lost = np.hypot(x, y) > _BEYOND
         if lost.any():
-            x[lost], y[lost] = self.projection(longitude.ravel()[lost] + _ASIDE, latitude.ravel()[lost])
+            x[lost], y[lost] = in_shape(self.projection, longitude.ravel()[lost] + _ASIDE, latitude.ravel()[lost])
         x = (np.reshape(x, longitude.shape) - self.origin[0]) / self.scale
         y = (np.reshape(y, longitude.shape) - self.origin[1]) / self.scale
         cosine, sine = math.cos(self.turn), math.sin(self.turn)
@@ -84,8 +88,8 @@ class Plane:
         cosine, sine = math.cos(self.turn), math.sin(self.turn)
         x = self.origin[0] + self.scale * (cosine * u - sine * v)
         y = self.origin[1] + self.scale * (sine * u + cosine * v)
-        longitude, latitude = self.projection(x.ravel(), y.ravel(), inverse=True)
-        return np.reshape(longitude, u.shape), np.reshape(latitude, u.shape)
+        longitude, latitude = in_shape(self.projection, x, y, inverse=True)
+        return longitude, latitude
 
 
 @dataclass(frozen=True)
@@ -146,7 +150,7 @@ def lay_window(
     distance = check.increasing("distance", distance)
     longitude = check.finite_array("longitude", longitude, ndim=1)
     latitude = check.finite_array("latitude", latitude, ndim=1)
-    alpha = check.number("the flexural parameter", alpha, above=0)
+    alpha = check.number(say("the flexural parameter"), alpha, above=0)
     spacing = alpha / CELLS_PER_ALPHA if spacing is None else check.number("spacing", spacing, above=0)
     reach = REACH * alpha if reach is None else check.number("reach", reach, above=0)
     laid = [
@@ -155,17 +159,26 @@ def lay_window(
     plane, half_size, distortion = min(laid, key=lambda each: each[2])
     width, height = 2.0 * half_size
     if not distortion < DISTORTION_LIMIT:
-        how_much = f"to {100 * distortion:.3g} %" if math.isfinite(distortion) else "beyond measure"
+        how_much = (
+            say("to {percent:.3g} %", percent=100 * distortion) if math.isfinite(distortion) else say("beyond measure")
+        )
         raise DownwarpError(
-            f"The plan view would take a window of {width / 1e3:.0f} by {height / 1e3:.0f} km, in which a plane "
-            f"distorts distances {how_much} (at most {100 * DISTORTION_LIMIT:g} %): the line is too long, or the plate "
-            "too stiff, for a flat map."
+            "The plan view would take a window of {width:.0f} by {height:.0f} km, in which a plane distorts distances "
+            "{how_much} (at most {limit:g} %): the line is too long, or the plate too stiff, for a flat map.",
+            width=width / 1e3,
+            height=height / 1e3,
+            how_much=how_much,
+            limit=100 * DISTORTION_LIMIT,
         )
     columns, rows = math.ceil(width / spacing), math.ceil(height / spacing)
     if rows * columns > MOST_CELLS:
         raise DownwarpError(
-            f"The plan view would take {rows} by {columns} cells of {spacing / 1e3:.3g} km, more than {MOST_CELLS}: "
-            "the line is too long for so thin a plate."
+            "The plan view would take {rows} by {columns} cells of {spacing:.3g} km, more than {most}: the line is "
+            "too long for so thin a plate.",
+            rows=rows,
+            columns=columns,
+            spacing=spacing / 1e3,
+            most=MOST_CELLS,
         )
     u, v = plane.from_degrees(longitude, latitude)
     row, column = v / spacing + 0.5 * (rows - 1), u / spacing + 0.5 * (columns - 1)
@@ -173,14 +186,14 @@ def lay_window(
 
 
 def lay_search_window(
-    distance, longitude, latitude, ellipsoid: Geod, alpha_from: float, alpha_to: float
+    distance, longitude, latitude, ellipsoid: Geod, alpha_from: float, alpha_to: float, cells: int = SEARCH_CELLS
 ) -> tuple[Window, tuple[str, ...]]:
     """The window of a search over plates of flexural parameters from ``alpha_from`` to ``alpha_to``, m; and remarks.
 
     Other than `lay_window`'s, it gives way: for the stiffest plates it reaches only as far as a plane can do, and for
-    the thinnest its cells are no smaller than `SEARCH_CELLS` of them allow.
+    the thinnest its ``cells`` are no smaller than their number allows.
     """
-    reach = REACH * check.number("the flexural parameter", alpha_to, at_least=alpha_from)
+    reach = REACH * check.number(say("the flexural parameter"), alpha_to, at_least=alpha_from)
     remarks: tuple[str, ...] = ()
     given = (distance, longitude, latitude, ellipsoid, alpha_to)
     while True:
@@ -189,7 +202,7 @@ def lay_search_window(
             # The shape of the window follows from its reach; a few cells are enough to learn it.
             outline = lay_window(*given, spacing=reach / 10, reach=reach)
             area = outline.shape[0] * outline.shape[1] * outline.spacing**2
-            window = lay_window(*given, spacing=max(spacing, math.sqrt(area / SEARCH_CELLS)), reach=reach)
+            window = lay_window(*given, spacing=max(spacing, math.sqrt(area / cells)), reach=reach)
             break
         except DownwarpError:
             reach *= 0.95
@@ -197,8 +210,12 @@ def lay_search_window(
                 raise
     if reach < 0.999 * REACH * alpha_to:
         remarks += (
-            f"load farther than {reach / 1e3:.0f} km from the line is left out: more does not lie in a plane, and for "
-            f"flexural parameters above {reach / REACH / 1e3:.0f} km it begins to matter",
+            say(
+                "load farther than {reach:.0f} km from the line is left out: more does not lie in a plane, and for "
+                "flexural parameters above {alpha:.0f} km it begins to matter",
+                reach=reach / 1e3,
+                alpha=reach / REACH / 1e3,
+            ),
         )
     return window, remarks
 
@@ -256,9 +273,9 @@ class PlanRelief:
     """Places inside the given load area, bool, shaped like `relief`; None where no area was given."""
 
 
-def refinement(window: Window, cell_size: float) -> int:
-    """Places along each side of a cell at which to read a grid of cells of ``cell_size``, m."""
-    return int(np.clip(math.ceil(window.spacing / cell_size), 1, MOST_REFINEMENT))
+def refinement(window: Window, cell_size: float, most: int = MOST_REFINEMENT) -> int:
+    """Places along each side of a cell at which to read a grid of cells of ``cell_size``, m: ``most`` of them."""
+    return int(np.clip(math.ceil(window.spacing / cell_size), 1, most))
 
 
 def mapped_load(problem: Problem, plan: PlanRelief) -> tuple[SheetLine, tuple[str, ...]]:
@@ -271,13 +288,18 @@ def mapped_load(problem: Problem, plan: PlanRelief) -> tuple[SheetLine, tuple[st
     options, rho, window = problem.options, problem.densities, plan.window
     kind, level = options.chosen("load")[0], problem.reference_level
     if kind == LOAD_NONE or level is None or not problem.load.any():
-        raise DownwarpError(f"{problem.profile.name}: no station of the line carries a relief load: nothing is mapped.")
+        raise DownwarpError(
+            "{transect}: no station of the line carries a relief load: nothing is mapped.",
+            transect=problem.profile.name,
+        )
     known = np.isfinite(plan.relief)
     base = level if kind == LOAD_RELIEF else 0.0
     relief = np.where(known, plan.relief, base)
     if kind != LOAD_RELIEF:
         if (relief < 0).any():
-            raise DownwarpError(f"{problem.profile.name}: the DEM holds a load thickness below 0 (LOAD is 1).")
+            raise DownwarpError(
+                "{transect}: the DEM holds a load thickness below 0 (LOAD is 1).", transect=problem.profile.name
+            )
         relief = level + relief
     inside = _load_places(problem, plan, relief - level)
     load = np.where(inside, relief_load(relief, level, rho, options.elastic.gravity), 0.0)
@@ -290,7 +312,9 @@ def mapped_load(problem: Problem, plan: PlanRelief) -> tuple[SheetLine, tuple[st
     remarks: tuple[str, ...] = ()
     if not known.all():
         missing = 100.0 * (1.0 - float(known.mean()))
-        remarks = (f"{missing:.2g} % of the plan view lies outside the DEM and counts as without load",)
+        remarks = (
+            say("{missing:.2g} % of the plan view lies outside the DEM and counts as without load", missing=missing),
+        )
     return SheetLine(sheet, window.row, window.column), remarks
 
 

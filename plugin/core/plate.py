@@ -59,13 +59,18 @@ def _shape(t, derivative: int = 0) -> np.ndarray:
 _ENTRIES = ((0, 0), (2, 0), (2, 2), (1, 0), (3, 0), (2, 1), (3, 2), (1, 1), (3, 1), (3, 3))
 _ROWS, _COLUMNS = np.array(_ENTRIES).T
 _ONE_SLOPE, _TWO_SLOPES = 3, 7
+# Their places in the two columns of the band that belong to an element's left node, then in those of its right one.
+_IN_BLOCKS = 4 * _COLUMNS + _ROWS - _COLUMNS
 
 _SHAPES = tuple(_shape(_GAUSS, derivative) for derivative in range(3))
 _FLOAT, _PULL, _BEND = (shape[_ROWS] * shape[_COLUMNS] * _WEIGHTS for shape in _SHAPES)  # each (10 entries, 4 points)
+_BEND_AT, _FLOAT_AT = ({4: part, 1: part.sum(axis=1, keepdims=True)} for part in (_BEND, _FLOAT))
+"""The same by the number of Gauss points at which a property is given: at all, or at one that stands for them."""
 _LOAD = (_SHAPES[0] * _WEIGHTS) @ np.stack([1 - _GAUSS, _GAUSS]).T  # (4 unknowns, 2 ends)
 
 # Share of the answer that rounding spoils (`Plate._rounding`) above which `solve` refines it, above which refining is
 # in vain, and what it refines to, in so many steps at most.
+_EPSILON = float(np.finfo(float).eps)
 _REFINE_ABOVE = 1e-6
 _ROUNDING_LIMIT = 0.1
 _REFINE_TO = 1e-12
@@ -101,8 +106,9 @@ def half_plate_stiffness(rigidity: float, stiffness: float, in_plane: float = 0.
     s_squared = 2.0 * p - in_plane / rigidity
     if s_squared <= 1e-12 * p:
         raise DownwarpError(
-            f"IN_PLANE is {in_plane:g} N/m, at or above the force of {2.0 * math.sqrt(rigidity * stiffness):.4g} N/m "
-            "at which the plate buckles."
+            "IN_PLANE is {in_plane:g} N/m, at or above the force of {force:.4g} N/m at which the plate buckles.",
+            in_plane=in_plane,
+            force=2.0 * math.sqrt(rigidity * stiffness),
         )
     s = math.sqrt(s_squared)
     return rigidity * np.array([[s * p, p], [p, s]])
@@ -133,7 +139,10 @@ class Plate:
             elements = nodes.size - 1
             if values.shape not in ((), (elements,), (elements, 4)):
                 raise DownwarpError(
-                    f"{name} has shape {values.shape}; it takes a scalar, ({elements},) or ({elements}, 4)."
+                    "{name} has shape {shape}; it takes a scalar, ({elements},) or ({elements}, 4).",
+                    name=name,
+                    shape=values.shape,
+                    elements=elements,
                 )
             object.__setattr__(self, name, values)
         if not (self.rigidity > 0).all():
@@ -143,7 +152,7 @@ class Plate:
         check.number("IN_PLANE", self.in_plane)
         for name in ("start", "finish"):
             if getattr(self, name) not in (CONTINUES, BROKEN, PINNED, CLAMPED):
-                raise DownwarpError(f"{name} is {getattr(self, name)!r}; it takes 0 to 3.")
+                raise DownwarpError("{name} is {value!r}; it takes 0 to 3.", name=name, value=getattr(self, name))
 
     def at_gauss(self, name: str) -> np.ndarray:
         """Values of ``rigidity`` or ``stiffness`` at the Gauss points, shape (elements, 4), or (1, 4) if uniform."""
@@ -163,9 +172,16 @@ class Plate:
         return float(self.nodes[-1] - self.nodes[0]) / self.lengths.size
 
     @cached_property
+    def _spans(self) -> np.ndarray:
+        """`lengths` as they enter products: one alone where all are the same but for the rounding of the nodes."""
+        h = self.lengths
+        even = h.max() - h.min() <= 8.0 * _EPSILON * max(abs(self.nodes[0]), abs(self.nodes[-1]))
+        return np.array([self.scale]) if even else h
+
+    @cached_property
     def _ratio(self) -> np.ndarray:
-        """Element length / scale, by which an element multiplies the slopes among the unknowns."""
-        return self.lengths / self.scale
+        """`_spans` / scale, by which an element multiplies the slopes among the unknowns."""
+        return self._spans / self.scale
 
     @cached_property
     def _ends(self) -> tuple[tuple[slice, float, np.ndarray], ...]:
@@ -188,19 +204,23 @@ class Plate:
 
     def _assembled(self) -> tuple[np.ndarray, float]:
         """`band`, and the rounding that it carries (`_rounding`)."""
-        h = self.lengths
-        bending = (_BEND @ self.at_gauss("rigidity").T) * (1.0 / (h * h * h))
-        floating = (_FLOAT @ self.at_gauss("stiffness").T) * h
-        rounding = self._rounding(bending, floating)
-        entries = bending + floating
+        h = self._spans
+        bending, floating = self._by_point("rigidity") / (h * h * h), self._by_point("stiffness") * h
+        # Where all elements are alike these hold one column, which stands for all.
+        bent, borne = _BEND_AT[len(bending)] @ bending, _FLOAT_AT[len(floating)] @ floating
+        rounding = self._rounding(float(bent[0].sum()) / bent.shape[1], float(borne[0].sum()) / borne.shape[1])
+        entries = bent + borne
         if self.in_plane:
             entries -= self.in_plane * _PULL.sum(axis=1)[:, None] / h
         entries[_ONE_SLOPE:] *= self._ratio
         entries[_TWO_SLOPES:] *= self._ratio
 
-        band = np.zeros((4, 2 * self.nodes.size), order="F")
-        for (row, column), entry in zip(_ENTRIES, entries):
-            band[row - column, column : column + 2 * h.size : 2] += entry
+        if entries.shape[1] == 1:
+            band = self._repeated(entries[:, 0])
+        else:
+            band = np.zeros((4, 2 * self.nodes.size), order="F")
+            for (row, column), entry in zip(_ENTRIES, entries):
+                band[row - column, column : column + 2 * self.lengths.size : 2] += entry
         for at, _, matrix in self._ends:
             band[0, at] += matrix.diagonal()
             band[1, at.start] += matrix[1, 0]
@@ -211,17 +231,32 @@ class Plate:
             band[0, unknown] = 1.0
         return band, rounding
 
-    def _rounding(self, bending: np.ndarray, floating: np.ndarray) -> float:
+    def _repeated(self, entries: np.ndarray) -> np.ndarray:
+        """The band of elements that are all alike, (4, 2 n), from one's entries (10,)."""
+        blocks = np.zeros(16)
+        blocks[_IN_BLOCKS] = entries
+        left, right = blocks.reshape(2, 1, 8)
+        band = (left + right).repeat(self.nodes.size, axis=0)
+        band[0], band[-1] = left[0], right[0]
+        return band.reshape(-1, 4).T
+
+    def _by_point(self, name: str) -> np.ndarray:
+        """``rigidity`` or ``stiffness`` at each element's Gauss points, (4, elements), or (1, ...) where all are one."""
+        values = getattr(self, name)
+        return values.T if values.ndim == 2 else values.reshape(1, -1)
+
+    def _rounding(self, bending: float, floating: float) -> float:
         """Rounding in the bending entries beside what holds the plate: about the share of the answer that it spoils.
 
-        The sum of these entries grows with 1 / length^3. Against it stands the stiffness that meets a shift of the
-        whole plate: of the foundation, of the half-plates, and that of its own bending between held ends (that of a
-        beam of length L on pins, pi^4 D / 2 L^3).
+        ``bending``, ``floating``: means over the elements of the entries that multiply no slope. The former grows with
+        1 / length^3. Against it stands the stiffness that meets a shift of the whole plate: of the foundation, of the
+        half-plates, and that of its own bending between held ends (that of a beam of length L on pins, pi^4 D / 2 L^3).
         """
-        holding = 2.0 * floating[0].sum() + sum(matrix[0, 0] for _, _, matrix in self._ends)
+        count = self.lengths.size
+        holding = 2.0 * count * floating + sum(matrix[0, 0] for _, _, matrix in self._ends)
         if self._held:
             holding += 0.5 * math.pi**4 * self.rigidity.min() / (self.nodes[-1] - self.nodes[0]) ** 3
-        return float(2.0 * np.finfo(float).eps * bending[0].sum() / holding)
+        return 2.0 * _EPSILON * count * bending / holding
 
     @cached_property
     def _held(self) -> tuple[int, ...]:
@@ -243,7 +278,7 @@ class Plate:
     @cached_property
     def _factored(self) -> tuple[np.ndarray, float]:
         # Without a foundation, two held unknowns, or one and a pull along x, keep the plate in its place.
-        if not self.stiffness.any() and len(self._held) + (self.in_plane < 0) < 2 and not self._ends:
+        if not self._ends and len(self._held) + (self.in_plane < 0) < 2 and not self.stiffness.any():
             raise DownwarpError(
                 "Nothing holds the plate: give it a restoring stiffness or ends that are pinned or clamped."
             )
@@ -253,7 +288,8 @@ class Plate:
             raise self._too_close()
         if info != 0:
             raise DownwarpError(
-                f"IN_PLANE is {self.in_plane:g} N/m: more in-plane compression than the plate can carry; it buckles."
+                "IN_PLANE is {in_plane:g} N/m: more in-plane compression than the plate can carry; it buckles.",
+                in_plane=self.in_plane,
             )
         return factor, rounding
 
@@ -269,17 +305,25 @@ class Plate:
         """
         forces, outer = self._element_loads(load, at)
         vector = self._assemble(forces)
-        if beyond:
-            for end, stiffness, matrix in self._ends:
-                vector[end] += matrix[:, :1] * (outer[end.start] / stiffness)
+        return vector + self.beyond_vector(outer[0], outer[-2]) if beyond else vector
+
+    def beyond_vector(self, first, last) -> np.ndarray:
+        """Nodal forces, (2 n, loads), of loads held constant beyond the ends where the plate continues.
+
+        ``first``, ``last``: q at the first and at the last node, Pa, shape (loads,).
+        """
+        vector = np.zeros((2 * self.nodes.size, len(first)), order="F")
+        for end, stiffness, matrix in self._ends:
+            vector[end] = matrix[:, :1] * ((last if end.start else first) / stiffness)
         return vector
 
     def _assemble(self, forces: np.ndarray) -> np.ndarray:
         """Forces on every element's four unknowns, (4, elements, loads), summed at the nodes, (2 n, loads)."""
-        vector = np.zeros((2 * self.nodes.size, forces.shape[2]), order="F")
-        for unknown, force in enumerate(forces):
-            vector[unknown : unknown + 2 * self.lengths.size : 2] += force
-        return vector
+        nodes, loads = self.nodes.size, forces.shape[2]
+        vector = np.zeros((2, nodes, loads), order="F")
+        vector[:, :-1] = forces[:2]
+        vector[:, 1:] += forces[2:]
+        return vector.reshape(2 * nodes, loads, order="F")
 
     def _element_loads(self, load, at=None) -> tuple[np.ndarray, dict[int, np.ndarray]]:
         """Forces of a distributed load on each element's four unknowns, (4, elements, loads), and the load at the first
@@ -295,9 +339,12 @@ class Plate:
             left, right = load[:, 0], load[:, 1]
         else:
             raise DownwarpError(
-                f"load has shape {load.shape}; it takes ({elements + 1},), ({elements + 1}, m) or ({elements}, 2, m)."
+                "load has shape {shape}; it takes ({nodes},), ({nodes}, m) or ({elements}, 2, m).",
+                shape=load.shape,
+                nodes=elements + 1,
+                elements=elements,
             )
-        forces = _combine(_LOAD, np.stack([left, right])) * self.lengths[:, None]
+        forces = _combine(_LOAD, np.stack([left, right]) * self._spans[:, None])
         forces[1::2] *= self._ratio[:, None]
         return forces, {0: left[0], -2: right[-1]}
 
@@ -305,7 +352,9 @@ class Plate:
         """`_element_loads` of a load linear between positions ``at`` that need not be nodes, without error."""
         at = check.increasing("at", at)
         if load.ndim not in (1, 2) or load.shape[0] != at.size:
-            raise DownwarpError(f"load has shape {load.shape}; it takes ({at.size},) or ({at.size}, m).")
+            raise DownwarpError(
+                "load has shape {shape}; it takes ({count},) or ({count}, m).", shape=load.shape, count=at.size
+            )
         if at[0] > self.nodes[0] or at[-1] < self.nodes[-1]:
             raise DownwarpError("The positions of the load must reach from the first node to the last one.")
         load = load.reshape(at.size, -1)
@@ -359,7 +408,12 @@ class Plate:
         """Nodal forces that a caller gave, as columns."""
         values = check.finite_array(name, values)
         if values.ndim not in (1, 2) or values.shape[0] != 2 * self.nodes.size:
-            raise DownwarpError(f"{name} has shape {values.shape}; it takes {2 * self.nodes.size} rows.")
+            raise DownwarpError(
+                "{name} has shape {shape}; it takes {size} rows.",
+                name=name,
+                shape=values.shape,
+                size=2 * self.nodes.size,
+            )
         return values.reshape(values.shape[0], -1)
 
     def _substitute(self, vector: np.ndarray) -> np.ndarray:
@@ -383,8 +437,9 @@ class Plate:
 
     def _too_close(self) -> DownwarpError:
         return DownwarpError(
-            f"The nodes stand {self.scale:.3g} m apart, too close for so stiff a plate: rounding would spoil the "
-            "answer; take longer steps."
+            "The nodes stand {spacing:.3g} m apart, too close for so stiff a plate: rounding would spoil the answer; "
+            "take longer steps.",
+            spacing=self.scale,
         )
 
     def _resistance(self, unknowns: np.ndarray) -> np.ndarray:
@@ -400,7 +455,7 @@ class Plate:
         Bending, in-plane force and foundation are applied one by one, the first two to deflections less that of the
         left node: in short elements the sum of their matrices loses the digits of the foundation.
         """
-        h = self.lengths
+        h = self._spans
         ends = np.stack([unknowns[i : unknowns.shape[0] - 3 + i : 2] for i in range(4)])
         ends[1::2] *= self._ratio[:, None]
         forces = self._act(0, self.at_gauss("stiffness").T * h, ends)
@@ -511,7 +566,7 @@ class Bending:
         """w or a derivative of it at positions (m) within the nodes, by the elements' cubics, (positions, loads)."""
         element, local = self._locate(positions)
         shape = _shape(local, derivative) / self.plate.lengths[element] ** derivative
-        shape[1::2] *= self.plate._ratio[element]
+        shape[1::2] *= self.plate.lengths[element] / self.plate.scale
         return sum(shape[i][:, None] * self.unknowns[2 * element + i] for i in range(4))
 
     def _locate(self, positions) -> tuple[np.ndarray, np.ndarray]:

@@ -39,6 +39,7 @@ from scipy.special import gammaln, logsumexp, ndtr
 from . import check
 from .errors import DownwarpError
 from .noise import FAMILIES, NoiseFamily, Setting, merge_matrix
+from .wording import say
 
 Model = Callable[[np.ndarray, "float | None"], "tuple[np.ndarray, np.ndarray]"]
 """model(te, break_at): te (T,) in m, break in m or None -> offset (T, N) in m, columns (T, N, p)."""
@@ -49,10 +50,14 @@ WANTED_POINTS = 24
 """Grid points wanted where the posterior is within `REACH` of its mode."""
 REACH = 12.0
 """ln of the posterior below its mode at which refinement ends."""
+MOST_TOGETHER = 1_000_000
+"""Numbers that are kept at a time of noise settings by trials."""
 MOST_CELLS = 250
 """Stations beyond this number are averaged for inference."""
 NEGLIGIBLE = 1e-4
 """Weight of a noise setting, relative to the best, below which it is dropped."""
+IMPOSSIBLE = 1e-8
+"""The same, below which it is not looked at again when the noise's local amplitude has been found."""
 MOST_REFINEMENTS = 6
 """Grids after which the search takes what it has."""
 DECISIVE = float(np.log(10.0))
@@ -205,8 +210,8 @@ class _Grid:
     """Noise settings that the trials were weighed under"""
     log_likelihood: np.ndarray = field(default_factory=lambda: np.zeros((0, 0)))
     """(settings, K T)"""
-    moments: tuple[np.ndarray, ...] = ()
-    """Gram matrices of the basis and the regional columns per setting, each (r + p0, r + p0)"""
+    moments: np.ndarray = field(default_factory=lambda: np.zeros((0, 0, 0)))
+    """Gram matrices of the basis and the regional columns, (settings, r + p0, r + p0)"""
 
     def marginal(self) -> np.ndarray:
         """ln likelihood averaged over noise settings, (K, T)."""
@@ -226,6 +231,8 @@ class Search:
     """ln(te_to / te_from)"""
     break_width: float
     """Width of the break's search range, m; 0 where it is not searched."""
+    possible: tuple[Setting, ...]
+    """Noise settings that might matter under noise of another local amplitude."""
     tempering: float = 1.0
 
 
@@ -296,57 +303,88 @@ def thickness_posterior(
     regional = columns.shape[2] - common
     if not np.array_equal(columns[0, :, regional:], columns[-1, :, regional:]):
         raise DownwarpError(
-            f"The last {common} columns of the model are the regional and must not depend on the trial."
+            "The last {common} columns of the model are the regional and must not depend on the trial.", common=common
         )
     line = _line(observed, distance, places, sigma, resolution, columns[0], common)
     if line.observed.size < columns.shape[2] + 3:
         raise DownwarpError(
-            f"There are {line.observed.size} stations to fit, at the data's resolution of {resolution:g} m; "
-            f"with {columns.shape[2]} linear parameters it takes at least {columns.shape[2] + 3}."
+            "There are {count} stations to fit, at the data's resolution of {resolution:g} m; with {parameters} "
+            "linear parameters it takes at least {least}.",
+            count=line.observed.size,
+            resolution=resolution,
+            parameters=columns.shape[2],
+            least=columns.shape[2] + 3,
         )
     centre = line.merge @ distance[places]
     errors = None if sigma is None else 1.0 / np.sqrt((line.merge > 0) @ sigma**-2.0 / (line.merge > 0).sum(axis=1))
     tell(0.2)
-    first = _grid(line, log_te, breaks, offset, columns)
-    search = _search(
-        line, NoiseFamily(centre, errors, known_error=known_error, families=families), first, evaluate, searched
-    )
+    known = {_place(log_te, breaks): _grid(line, log_te, breaks, offset, columns)}
+
+    def trials(log_te: np.ndarray, positions: np.ndarray) -> _Grid:
+        """The grid of these trials, not weighed yet; several searches of a line ask for the same."""
+        place = _place(log_te, positions)
+        if place not in known:
+            known[place] = _grid(line, log_te, positions, *evaluate(log_te, positions))
+        return replace(known[place])
+
+    def search_under(noise: NoiseFamily, settings: tuple[Setting, ...]) -> Search:
+        return _search(line, noise, settings, trials, (log_te, breaks), searched)
+
+    noise = NoiseFamily(centre, errors, known_error=known_error, families=families)
+    search = search_under(noise, noise.settings)
     tell(0.4)
     amplitude, heavy = _unevenness(line, search)
     for _ in range(ROBUST_PASSES if robust else 0):
         extra = _outliers(line, search)
         settled = bool(np.array_equal(extra > 0, search.noise.extra > 0))
         noise = NoiseFamily(centre, errors, extra=extra, known_error=known_error, families=families)
-        search = _search(line, noise, first, evaluate, searched)
+        search = search_under(noise, noise.settings)
         if settled:
             break
     tell(0.7)
     if search.noise.extra.any():
         amplitude = _unevenness(line, search)[0]  # tails are judged with the outliers in
-    noise = NoiseFamily(centre, errors, amplitude, search.noise.extra, known_error=known_error, families=families)
-    tempering = 1.0 + heavy * (TEMPERING[int(robust)] - 1.0)
-    search = replace(_search(line, noise, first, evaluate, searched), tempering=tempering)
+    if (amplitude != 1.0).any():
+        noise = NoiseFamily(centre, errors, amplitude, search.noise.extra, known_error=known_error, families=families)
+        search = search_under(noise, search.possible)
+    noise = search.noise
+    search = replace(search, tempering=1.0 + heavy * (TEMPERING[int(robust)] - 1.0))
     tell(0.9)
     te_mode, break_mode = _mode(search)
-    mode = _grid(line, te_mode, break_mode, *evaluate(te_mode, break_mode))
+    mode = trials(te_mode, break_mode)
     _weigh(line, noise, mode, search.grid.settings)
     return _summary(line, search, mode, observed, te_from, te_to, breaks, searched, confidence, asked)
 
 
-def _search(line: _Line, noise: NoiseFamily, grid: _Grid, evaluate, searched: bool) -> Search:
-    """Refine the grid near the mode under the given noise."""
+def _place(log_te: np.ndarray, breaks: np.ndarray) -> tuple[bytes, bytes]:
+    return log_te.tobytes(), breaks.tobytes()
+
+
+def _search(
+    line: _Line,
+    noise: NoiseFamily,
+    settings: tuple[Setting, ...],
+    trials: Callable[[np.ndarray, np.ndarray], _Grid],
+    coarse: tuple[np.ndarray, np.ndarray],
+    searched: bool,
+) -> Search:
+    """Refine the grid near the mode, from the ``coarse`` one on, under the given noise and such of its settings."""
     weighed = []
-    settings = noise.settings
+    possible = settings
+    grid = trials(*coarse)
     for remaining in range(MOST_REFINEMENTS, 0, -1):
         _weigh(line, noise, grid, settings)
         weighed.append((grid, grid.marginal()))
-        settings = _surviving(grid) if _near_mode(grid).sum() >= 3 else settings
+        if _near_mode(grid).sum() >= 3:
+            if possible is settings:
+                possible = _surviving(grid, IMPOSSIBLE)
+            settings = _surviving(grid, NEGLIGIBLE)
         finer = _refined(grid, searched)
         if finer is None or remaining == 1:
             break
-        grid = _grid(line, *finer, *evaluate(*finer))
+        grid = trials(*finer)
     width = float(np.ptp(weighed[0][0].log_te)), float(np.ptp(weighed[0][0].breaks)) if searched else 0.0
-    return Search(line, noise, grid, tuple(weighed), *width)
+    return Search(line, noise, grid, tuple(weighed), *width, possible)
 
 
 def _mode(search: Search) -> tuple[np.ndarray, np.ndarray]:
@@ -502,62 +540,65 @@ def _weigh(line: _Line, noise: NoiseFamily, grid: _Grid, settings: tuple[Setting
     both = np.concatenate([grid.basis, line.regional], axis=1)
     count, common = line.observed.size, line.regional.shape[1]
     floor = count * (1e-5 * np.std(line.observed)) ** 2 + 1e-300
-    likelihood, moments = [], []
     coordinates = grid.coordinates
     trials, _, width = coordinates.shape
     plate = width - 1
-    flat = np.moveaxis(coordinates, 1, 0).reshape(rank, trials * width)
-
-    def inner_products(middle: np.ndarray) -> np.ndarray:
-        turned = np.moveaxis((middle @ flat).reshape(rank, trials, width), 0, 1)
-        return np.matmul(np.swapaxes(coordinates, 1, 2), turned)
-
-    plain = inner_products(_without_regional(both.T @ both, rank)[0])
-    scale = np.sqrt(np.maximum(np.einsum("tii->ti", plain[:, 1:, 1:]), 1e-300))
+    plain = _inner_products(_without_regional((both.T @ both)[None], rank)[0], coordinates)
+    scale = np.sqrt(np.maximum(np.einsum("stii->sti", plain[:, :, 1:, 1:]), 1e-300))
     volume, _ = _plate_terms(plain, scale)
     detrended = line.observed - line.regional @ (line.regional.T @ line.observed)
     variance = max(float(detrended @ detrended) / count, floor / count)
     free = count - common - plate
     constant = gammaln(0.5 * free) - 0.5 * free * np.log(np.pi) - 0.5 * plate * np.log(2.0 * np.pi * count * variance)
-    for factor in noise.factors(settings):
+    grams, determinants = np.empty((len(settings), rank + common, rank + common)), np.empty(len(settings))
+    for place, factor in enumerate(noise.factors(settings)):
         white = factor.whiten(both)
-        gram = white.T @ white
-        moments.append(gram)
-        middle, log_regional = _without_regional(gram, rank)
-        inner = inner_products(middle)
+        grams[place], determinants[place] = white.T @ white, factor.log_determinant
+    middle, log_regional = _without_regional(grams, rank)
+    likelihood = np.empty((len(settings), trials))
+    together = max(MOST_TOGETHER // (trials * width * max(rank, 1)), 1)
+    for start in range(0, len(settings), together):
+        part = slice(start, start + together)
+        inner = _inner_products(middle[part], coordinates)
         precision, explained = _plate_terms(inner, scale)
-        left = np.maximum(inner[:, 0, 0] - explained, 0.0) + floor
-        likelihood.append(
-            constant
-            - 0.5 * (factor.log_determinant + log_regional)
-            + 0.5 * (volume - precision)
-            - 0.5 * free * np.log(left)
-            + noise.log_prior_of_size(factor.setting, float(np.sqrt(left.min() / free)))
-        )
-    grid.settings, grid.log_likelihood, grid.moments = settings, np.array(likelihood), tuple(moments)
+        left = np.maximum(inner[:, :, 0, 0] - explained, 0.0) + floor
+        sizes = np.sqrt(left.min(axis=1) / free).tolist()
+        prior = [noise.log_prior_of_size(setting, size) for setting, size in zip(settings[part], sizes)]
+        likelihood[part] = 0.5 * (volume - precision) - 0.5 * free * np.log(left) + np.array(prior)[:, None]
+    likelihood += (constant - 0.5 * (determinants + log_regional))[:, None]
+    grid.settings, grid.log_likelihood, grid.moments = settings, likelihood, grams
+
+
+def _inner_products(middle: np.ndarray, coordinates: np.ndarray) -> np.ndarray:
+    """Gram matrices of (z, X1), (settings, trials, 1 + p1, 1 + p1), from those of the basis, (settings, r, r)."""
+    trials, rank, width = coordinates.shape
+    flat = np.moveaxis(coordinates, 1, 0).reshape(rank, trials * width)
+    turned = np.matmul(middle, flat).reshape(middle.shape[0], rank, trials, width)
+    return np.einsum("tri,srtj->stij", coordinates, turned)
 
 
 def _plate_terms(inner: np.ndarray, scale: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """ln determinant of the plate columns' Gram matrix (columns divided by ``scale``) and the sum of squares that they
-    explain, per trial, from Gram matrices of (z, X1), shape (trials, 1 + p1, 1 + p1)."""
-    trials, plate = scale.shape
+    """ln determinant of the plate columns' Gram matrix (columns divided by ``scale``, (trials, p1)) and the sum of
+    squares that they explain, per setting and trial, from Gram matrices of (z, X1)."""
+    plate = scale.shape[-1]
     if plate == 0:
-        return np.zeros(trials), np.zeros(trials)
-    matrix = inner[:, 1:, 1:] / (scale[:, :, None] * scale[:, None, :])
-    ridge = 1e-10 * np.einsum("tii->t", matrix) + 1e-30  # columns may be parallel, or 0 at every station
-    matrix = matrix + ridge[:, None, None] * np.eye(plate)
-    right = inner[:, 1:, 0] / scale
-    explained = (right * np.linalg.solve(matrix, right[:, :, None])[:, :, 0]).sum(axis=1)
+        return np.zeros(inner.shape[:2]), np.zeros(inner.shape[:2])
+    matrix = inner[..., 1:, 1:] / (scale[..., :, None] * scale[..., None, :])
+    ridge = 1e-10 * np.einsum("stii->st", matrix) + 1e-30  # columns may be parallel, or 0 at every station
+    matrix = matrix + ridge[..., None, None] * np.eye(plate)
+    right = inner[..., 1:, 0] / scale
+    explained = (right * np.linalg.solve(matrix, right[..., None])[..., 0]).sum(axis=-1)
     return np.linalg.slogdet(matrix)[1], np.maximum(explained, 0.0)
 
 
-def _without_regional(gram: np.ndarray, rank: int) -> tuple[np.ndarray, float]:
-    """The basis' Gram matrix with the regional fitted out, and ln |X0' R^-1 X0|."""
-    if gram.shape[0] == rank:
-        return gram, 0.0
-    regional = gram[rank:, rank:]
-    cross = gram[:rank, rank:]
-    return gram[:rank, :rank] - cross @ np.linalg.solve(regional, cross.T), float(np.linalg.slogdet(regional)[1])
+def _without_regional(gram: np.ndarray, rank: int) -> tuple[np.ndarray, np.ndarray]:
+    """The basis' Gram matrices with the regional fitted out, and ln |X0' R^-1 X0|, (settings,)."""
+    if gram.shape[-1] == rank:
+        return gram, np.zeros(gram.shape[0])
+    regional = gram[:, rank:, rank:]
+    cross = gram[:, :rank, rank:]
+    fitted = np.matmul(cross, np.linalg.solve(regional, np.swapaxes(cross, 1, 2)))
+    return gram[:, :rank, :rank] - fitted, np.linalg.slogdet(regional)[1]
 
 
 def _log_evidence(search: Search) -> float:
@@ -583,11 +624,11 @@ def _log_evidence_regional(line: _Line, noise: NoiseFamily, tempering: float) ->
     return float(grid.marginal()[0, 0]) / tempering
 
 
-def _surviving(grid: _Grid) -> tuple[Setting, ...]:
-    """Noise settings whose weight somewhere near the mode is not negligible."""
+def _surviving(grid: _Grid, least: float) -> tuple[Setting, ...]:
+    """Noise settings whose weight, over the best one's, is above ``least``."""
     prior = np.array([setting.log_prior for setting in grid.settings])[:, None]
     joint = logsumexp(grid.log_likelihood + prior, axis=1)
-    keep = joint > joint.max() + np.log(NEGLIGIBLE)
+    keep = joint > joint.max() + np.log(least)
     return tuple(setting for setting, kept in zip(grid.settings, keep) if kept)
 
 
@@ -754,25 +795,36 @@ def _remarks(resolved, odds, te_interval, break_interval, te_from, te_to, noise,
     remarks = []
     if not resolved:
         remarks.append(
-            "Elastic thickness is not resolved: "
-            + (
-                "every thickness in the search range fits."
-                if odds >= DECISIVE
-                else "the stations do not tell a bent plate from the regional alone."
+            say("Elastic thickness is not resolved: every thickness in the search range fits.")
+            if odds >= DECISIVE
+            else say(
+                "Elastic thickness is not resolved: the stations do not tell a bent plate from the regional alone."
             )
         )
     else:
         if te_interval.low is None:
-            remarks.append(f"Elastic thickness has no lower bound in the search range (from {te_from / 1e3:g} km).")
+            remarks.append(
+                say(
+                    "Elastic thickness has no lower bound in the search range (from {te_from:g} km).",
+                    te_from=te_from / 1e3,
+                )
+            )
         if te_interval.high is None:
-            remarks.append(f"Elastic thickness has no upper bound in the search range (up to {te_to / 1e3:g} km).")
+            remarks.append(
+                say("Elastic thickness has no upper bound in the search range (up to {te_to:g} km).", te_to=te_to / 1e3)
+            )
         if break_interval is not None and (break_interval.low is None or break_interval.high is None):
-            remarks.append("The break is not bounded on both sides in its search range.")
+            remarks.append(say("The break is not bounded on both sides in its search range."))
     outliers = int((noise.extra > 0).sum())
     if outliers:
-        remarks.append(f"{outliers} stations were down-weighted as outliers.")
+        remarks.append(say("{outliers} stations were down-weighted as outliers.", outliers=outliers))
     if tempering > 1.0 and resolved:
-        remarks.append(f"Residuals have heavy tails: intervals were widened (likelihood tempered by {tempering:.2g}).")
+        remarks.append(
+            say(
+                "Residuals have heavy tails: intervals were widened (likelihood tempered by {tempering:.2g}).",
+                tempering=tempering,
+            )
+        )
     return tuple(remarks)
 
 
@@ -788,7 +840,12 @@ class Comparison:
     """The same in plain words, with the odds."""
 
 
-def compare(first: Posterior, second: Posterior, names: tuple[str, str] = ("first", "second")) -> Comparison:
+def compare(
+    first: Posterior,
+    second: Posterior,
+    names: tuple[str, str] = ("first", "second"),
+    starts: tuple[str, str] = ("First", "Second"),
+) -> Comparison:
     """Weigh two fits of the same stations (the same regional, resolution and sigma) by evidence.
 
     Plate parameters have a proper prior, of deflections as large as the observed relief, and elastic thickness and
@@ -814,13 +871,24 @@ def compare(first: Posterior, second: Posterior, names: tuple[str, str] = ("firs
         odds.append(evidence[0] - evidence[1])
     log_odds = min(odds, key=abs) if odds[0] * odds[1] > 0.0 else 0.0
     preferred = None if abs(log_odds) < DECISIVE else int(log_odds < 0.0)
-    ratio = f"{np.exp(min(abs(log_odds), 13.8)):.2g}" if abs(log_odds) < 13.8 else "more than a million"
+    ratio = f"{np.exp(min(abs(log_odds), 13.8)):.2g}" if abs(log_odds) < 13.8 else say("more than a million")
     better, worse = names if log_odds >= 0.0 else names[::-1]
     if preferred is None:
-        remark = f"Undecided between {names[0]} and {names[1]} (odds {ratio} to 1 for {better})."
+        remark = say(
+            "Undecided between {first} and {second} (odds {ratio} to 1 for {better}).",
+            first=names[0],
+            second=names[1],
+            ratio=ratio,
+            better=better,
+        )
     else:
-        remark = f"{better} is preferred to {worse} (odds {ratio} to 1)."
-    return Comparison(float(log_odds), preferred, remark[0].upper() + remark[1:])
+        remark = say(
+            "{better} is preferred to {worse} (odds {ratio} to 1).",
+            better=starts[int(log_odds < 0.0)],
+            worse=worse,
+            ratio=ratio,
+        )
+    return Comparison(float(log_odds), preferred, remark)
 
 
 def _noise_summary(line: _Line, search: Search, variance: float) -> NoiseSummary:
@@ -854,10 +922,9 @@ def _surface(line: _Line, search: Search) -> Surface:
     for grid, marginal in search.weighed:
         rank = grid.basis.shape[1]
         both = np.concatenate([grid.basis, line.regional], axis=1)
-        middle, _ = _without_regional(both.T @ both, rank)
-        inner = np.matmul(np.swapaxes(grid.coordinates, 1, 2), np.matmul(middle, grid.coordinates))
-        scale = np.sqrt(np.maximum(np.einsum("tii->ti", inner[:, 1:, 1:]), 1e-300))
-        left = inner[:, 0, 0] - _plate_terms(inner, scale)[1]
+        inner = _inner_products(_without_regional((both.T @ both)[None], rank)[0], grid.coordinates)
+        scale = np.sqrt(np.maximum(np.einsum("stii->sti", inner[:, :, 1:, 1:]), 1e-300))
+        left = (inner[:, :, 0, 0] - _plate_terms(inner, scale)[1])[0]
         te.append(np.tile(np.exp(grid.log_te), grid.breaks.size))
         breaks.append(np.repeat(grid.breaks, grid.log_te.size))
         rms.append(np.sqrt(np.maximum(left, 0.0) / line.observed.size))

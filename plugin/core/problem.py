@@ -31,6 +31,7 @@ from .settings import (
     Densities,
     FitOptions,
 )
+from .wording import say
 
 
 @dataclass(frozen=True)
@@ -62,6 +63,9 @@ class Problem:
     reference_origin: str
     under_load: np.ndarray
     """Stations that carry load, (n,) bool."""
+    ground_share: np.ndarray
+    """Share of each interval between stations on the load's ground, where `Densities.under_load` fills the plate, (n - 1,).
+    """
     load_surface: np.ndarray
     """Stations whose surface is the load's own, left out of the fit, (n,) bool."""
     load: np.ndarray
@@ -81,7 +85,7 @@ class Problem:
         profile, options, rho = self.profile, self.options, self.densities
         forces, _ = options.chosen("end_forces")
         gravity = options.elastic.gravity
-        stiffness = infill_stiffness(profile.distance, self.under_load, rho.mantle, rho.infill, rho.under_load, gravity)
+        stiffness = infill_stiffness(self.ground_share, rho.mantle, rho.infill, rho.under_load, gravity)
         fill = None
         if options.fill_sinking_only:
             fluid = fluid_density(self.reference_level, rho.water)
@@ -110,6 +114,7 @@ class Problem:
     def observations(self) -> Observations:
         """What is fitted: observed stations outside the load and beyond the break, within the window, and picks.
 
+        In a DEM that shows both sides of the break, a station within a cell of it mixes them, and is left out.
         Where the bent surface is a separate layer and the user gives a window, stations under the load count too.
         Raises DownwarpError where nothing is left.
         """
@@ -121,6 +126,9 @@ class Problem:
             window_given = options.fit_from is not None or options.fit_to is not None
             if self.bare or not window_given:
                 inside &= ~self.load_surface
+        if self.bare and self._begins_at_break:
+            # The other side of the break is in cells that reach across it.
+            inside &= profile.distance >= self.last_break + 0.999 * profile.resolution
         inside &= self._in_window(profile.distance)
         if profile.excluded is not None:
             inside &= ~profile.excluded
@@ -141,11 +149,16 @@ class Problem:
             np.append(stations, np.full(int(chosen.sum()), -1)),
         )
 
+    @property
+    def _begins_at_break(self) -> bool:
+        """Whether the plate, or the part of it that an end force bends, begins at the break."""
+        return self.options.chosen("plate")[0] != CONTINUOUS or bool(self.options.chosen("end_forces")[0])
+
     def _in_window(self, distance: np.ndarray) -> np.ndarray:
         options = self.options
         inside = (distance >= 0) & (distance <= self.profile.distance[-1])
-        if options.chosen("plate")[0] != CONTINUOUS or options.chosen("end_forces")[0]:
-            inside &= distance >= self.last_break  # the plate, or the part of it that the end force bends
+        if self._begins_at_break:
+            inside &= distance >= self.last_break
         if options.fit_from is not None:
             inside &= distance >= options.fit_from
         if options.fit_to is not None:
@@ -162,11 +175,13 @@ def prepare(profile: Profile, options: FitOptions, search_steps: int = 21) -> Pr
     bare = profile.observed is None and profile.picks.distance.size == 0
     known = np.isfinite(profile.relief)
     if not known.any():
-        raise DownwarpError(f"{profile.name}: the DEM has no value anywhere along the line.")
+        raise DownwarpError("{transect}: the DEM has no value anywhere along the line.", transect=profile.name)
     densities, density_origins = options.densities(bare)
     load_kind, _ = options.chosen("load")
     level, level_origin = _reference_level(profile, options, bare, load_kind)
-    under_load, load_surface = _load_stations(profile, options, bare, load_kind, level)
+    under_load, load_ground = _load_stations(profile, options, bare, load_kind, level)
+    # In a DEM that shows both, a station within a cell of the load mixes the two, and is left out as well.
+    load_surface = _widened(load_ground, profile) if bare else load_ground
     load = np.zeros(profile.distance.shape)
     if load_kind != LOAD_NONE and level is not None:
         gravity = options.elastic.gravity
@@ -174,21 +189,28 @@ def prepare(profile: Profile, options: FitOptions, search_steps: int = 21) -> Pr
         relief = fill_gaps(profile.distance, profile.relief, base)
         if load_kind != LOAD_RELIEF:
             if (relief < 0).any():
-                raise DownwarpError(f"{profile.name}: the DEM holds a load thickness below 0 (LOAD is 1).")
+                raise DownwarpError(
+                    "{transect}: the DEM holds a load thickness below 0 (LOAD is 1).", transect=profile.name
+                )
             relief = level + relief
         load = np.where(under_load, relief_load(relief, level, densities, gravity), 0.0)
         if options.defaults.load_removed:
             load = -load
         if not known.all():
-            remarks.append(f"{int((~known).sum())} stations have no DEM value; the load is bridged over them")
-        for end, index in (("start", 0), ("end", -1)):
-            begins_there = end == "start" and options.chosen("plate")[0] == BROKEN
+            remarks.append(
+                say("{count} stations have no DEM value; the load is bridged over them", count=int((~known).sum()))
+            )
+        for index, words in (
+            (0, say("the load reaches the line's start and is held constant beyond it")),
+            (-1, say("the load reaches the line's end and is held constant beyond it")),
+        ):
+            begins_there = index == 0 and options.chosen("plate")[0] == BROKEN
             if load[index] != 0 and not begins_there and options.load_shape != MAPPED:
-                remarks.append(f"the load reaches the line's {end} and is held constant beyond it")
+                remarks.append(words)
     breaks, break_origin = _breaks(profile, options, search_steps)
     return Problem(
-        profile, options, densities, density_origins, bare, level, level_origin, under_load, load_surface,
-        load, breaks, break_origin, tuple(remarks),
+        profile, options, densities, density_origins, bare, level, level_origin, under_load,
+        _ground_share(profile, options, load_ground), load_surface, load, breaks, break_origin, tuple(remarks),
     )  # fmt: skip
 
 
@@ -220,11 +242,11 @@ def _given_area(profile: Profile, options: FitOptions) -> np.ndarray | None:
 def _load_stations(
     profile: Profile, options: FitOptions, bare: bool, load_kind: int, level: float | None
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Stations that carry load, and those whose surface is the load's own and so is left out of the fit, each (n,).
+    """Stations that carry load, and those of its ground, whose surface is left out of the fit, each (n,).
 
-    Both are the area given, where one was. Otherwise the main rises (`load_mask`) are left out; they are all of the
-    load where the same DEM shows the bent surface, else all that rises above the level is. In a DEM that shows both, a
-    station within a cell of the load mixes the two, and is left out as well.
+    The ground is the area given, where one was, also where noise or a gap takes relief on it below the level; what
+    rises there is load. Otherwise it is the main rises (`load_mask`), which are all of the load where the same DEM
+    shows the bent surface; else all that rises above the level is load.
     """
     if load_kind == LOAD_NONE or level is None:
         nowhere = np.zeros(profile.distance.shape, dtype=bool)
@@ -233,9 +255,25 @@ def _load_stations(
     above = np.nan_to_num(profile.relief - base, nan=0.0) > 0
     given = _given_area(profile, options)
     if given is not None:
-        return given & above, _widened(given, profile) if bare else given
+        return given & above, given
     main = load_mask(profile.relief, base)
-    return (main, _widened(main, profile)) if bare else (above, main)
+    return main if bare else above, main
+
+
+def _ground_share(profile: Profile, options: FitOptions, on_ground: np.ndarray) -> np.ndarray:
+    """Share of each interval between stations on the load's ground, (n - 1,): as the area and window given cut it; of a
+    ground that only the stations (n,) tell, half the interval in which it ends."""
+    told = 0.5 * (on_ground[1:].astype(float) + on_ground[:-1])
+    if _given_area(profile, options) is None or not on_ground.any():
+        return told
+    at = profile.distance
+    first = at[0] if options.load_from is None else options.load_from
+    last = at[-1] if options.load_to is None else options.load_to
+    window = np.maximum(np.minimum(at[1:], last) - np.maximum(at[:-1], first), 0.0) / np.diff(at)
+    if profile.load_area_share is not None:
+        return window * profile.load_area_share
+    inside = np.ones(at.shape) if profile.in_load_area is None else profile.in_load_area.astype(float)
+    return window * 0.5 * (inside[1:] + inside[:-1])
 
 
 def _widened(inside: np.ndarray, profile: Profile) -> np.ndarray:
@@ -266,8 +304,11 @@ def _breaks(profile: Profile, options: FitOptions, steps: int) -> tuple[np.ndarr
         value = getattr(options, name)
         if value is None or not 0 <= value < length:
             raise DownwarpError(
-                f"{profile.name}: {key} must lie on the line, from 0 to below {length / 1e3:.1f} km"
-                f"{'' if value is None else f'; it is {value / 1e3:g} km'}."
+                "{transect}: {key} must lie on the line, from 0 to below {length:.1f} km{found}.",
+                transect=profile.name,
+                key=key,
+                length=length / 1e3,
+                found="" if value is None else say("; it is {value:g} km", value=value / 1e3),
             )
         places.append(float(value))
     if where == BREAK_GIVEN:

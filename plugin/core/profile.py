@@ -9,6 +9,7 @@ import numpy as np
 
 from . import check
 from .errors import DownwarpError
+from .wording import say
 
 if TYPE_CHECKING:
     from .plan import PlanRelief  # it needs profiles itself
@@ -56,12 +57,21 @@ class Profile:
     """The relief about the line; None where the load is a strip."""
     thickness: np.ndarray | None = None
     """Elastic thickness stated along the line, m, shape (n,), NaN where there is none; None where none is stated."""
+    load_area_share: np.ndarray | None = None
+    """Share of each interval between stations inside the given load area, shape (n - 1,); None where it is unknown."""
 
     def __post_init__(self) -> None:
         object.__setattr__(
-            self, "distance", check.increasing(f"the distance of the stations of {self.name}", self.distance)
+            self,
+            "distance",
+            check.increasing(say("the distance of the stations of {transect}", transect=self.name), self.distance),
         )
         for name in ("relief", "observed", "sigma", "in_load_area", "excluded", "thickness"):
             values = getattr(self, name)
             if values is not None and np.shape(values) != self.distance.shape:
-                raise DownwarpError(f"{name} has shape {np.shape(values)}; it takes {self.distance.shape}.")
+                raise DownwarpError(
+                    "{name} has shape {shape}; it takes {wanted}.",
+                    name=name,
+                    shape=np.shape(values),
+                    wanted=self.distance.shape,
+                )

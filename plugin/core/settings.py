@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from . import check
 from .elastic import Elastic
 from .errors import DownwarpError
+from .wording import say
 
 VOLCANO, TRENCH, FORELAND, REMOVED, OTHER = range(5)
 """Settings, in the order of the key SETTING."""
@@ -24,9 +25,9 @@ REGIONAL_NONE, REGIONAL_LEVEL, REGIONAL_TILT, REGIONAL_BOW, REGIONAL_AS_SETTING 
 STRIP, MAPPED = range(2)
 """Shapes of the load, in the order of the key LOAD_SHAPE."""
 
-PLATE_NAMES = ("continuous", "broken")
+PLATE_NAMES = (say("continuous"), say("broken"))
 
-GIVEN, FROM_SETTING, MEASURED, FITTED = "given", "setting", "measured", "fitted"
+GIVEN, FROM_SETTING, MEASURED, FITTED = say("given"), say("setting"), say("measured"), say("fitted")
 """Where a value in use came from."""
 
 RHO_AIR = 0.0
@@ -55,7 +56,7 @@ class Setting:
 
 SETTINGS = (
     Setting(
-        "volcanic load on the seafloor",
+        say("volcanic load on the seafloor"),
         CONTINUOUS,
         BREAK_START,
         LOAD_RELIEF,
@@ -65,10 +66,14 @@ SETTINGS = (
         2500,
         1030,
     ),
-    Setting("trench and outer rise", BROKEN, BREAK_LOWEST, LOAD_NONE, FORCES_BOTH, REGIONAL_TILT, 2800, 1030, 1030),
-    Setting("foreland basin", BROKEN, BREAK_START, LOAD_RELIEF, FORCES_SHEAR, REGIONAL_LEVEL, 2670, 2400, 0),
-    Setting("load removed", CONTINUOUS, BREAK_START, LOAD_THICKNESS, FORCES_NONE, REGIONAL_LEVEL, 1000, 0, 0, True),
-    Setting("none of these", CONTINUOUS, BREAK_START, LOAD_RELIEF, FORCES_NONE, REGIONAL_LEVEL, 2700, 1030, 1030),
+    Setting(
+        say("trench and outer rise"), BROKEN, BREAK_LOWEST, LOAD_NONE, FORCES_BOTH, REGIONAL_TILT, 2800, 1030, 1030
+    ),
+    Setting(say("foreland basin"), BROKEN, BREAK_START, LOAD_RELIEF, FORCES_SHEAR, REGIONAL_LEVEL, 2670, 2400, 0),
+    Setting(
+        say("load removed"), CONTINUOUS, BREAK_START, LOAD_THICKNESS, FORCES_NONE, REGIONAL_LEVEL, 1000, 0, 0, True
+    ),
+    Setting(say("none of these"), CONTINUOUS, BREAK_START, LOAD_RELIEF, FORCES_NONE, REGIONAL_LEVEL, 2700, 1030, 1030),
 )
 
 
@@ -125,11 +130,17 @@ class FitOptions:
             ("LOAD_SHAPE", self.load_shape, 2),
         ):
             if choice not in range(count):
-                raise DownwarpError(f"{key} is {choice!r}; it takes a number from 0 to {count - 1}.")
+                raise DownwarpError(
+                    "{key} is {choice!r}; it takes a number from 0 to {last}.", key=key, choice=choice, last=count - 1
+                )
         check.number("TE_FROM", self.te_from / 1e3, at_least=0.1, at_most=1000)
         check.number("TE_TO", self.te_to / 1e3, at_least=0.1, at_most=1000)
         if self.te_from >= self.te_to:
-            raise DownwarpError(f"TE_FROM ({self.te_from / 1e3:g} km) must be below TE_TO ({self.te_to / 1e3:g} km).")
+            raise DownwarpError(
+                "TE_FROM ({te_from:g} km) must be below TE_TO ({te_to:g} km).",
+                te_from=self.te_from / 1e3,
+                te_to=self.te_to / 1e3,
+            )
         for key, value in (("RHO_LOAD", self.rho_load), ("RHO_MANTLE", self.rho_mantle)):
             if value is not None:
                 check.number(key, value, above=0, at_most=20000)
@@ -149,7 +160,13 @@ class FitOptions:
                 if value is not None:
                     check.number(key, value / 1e3)
             if low is not None and high is not None and low >= high:
-                raise DownwarpError(f"{low_key} ({low / 1e3:g} km) must be below {high_key} ({high / 1e3:g} km).")
+                raise DownwarpError(
+                    "{low_key} ({low:g} km) must be below {high_key} ({high:g} km).",
+                    low_key=low_key,
+                    low=low / 1e3,
+                    high_key=high_key,
+                    high=high / 1e3,
+                )
         if self.break_at == BREAK_GIVEN and self.break_position is None:
             raise DownwarpError("BREAK_KM is blank; BREAK_AT 2 takes the distance of the break in it.")
         if self.break_position is not None:
@@ -170,38 +187,51 @@ class FitOptions:
 
     def _check_mapped(self) -> None:
         """Refuse what a plan view does not have."""
-        needs = "LOAD_SHAPE is 1 (as mapped), which takes"
+        needs = say("LOAD_SHAPE is 1 (as mapped), which takes")
         plate, forces = self.chosen("plate")[0], self.chosen("end_forces")[0]
         if plate != CONTINUOUS:
-            raise DownwarpError(f"{needs} a continuous plate (PLATE 0), but PLATE comes to {plate}.")
+            raise DownwarpError(
+                "{needs} a continuous plate (PLATE 0), but PLATE comes to {plate}.", needs=needs, plate=plate
+            )
         if forces != FORCES_NONE:
-            raise DownwarpError(f"{needs} no end forces (END_FORCES 0), but END_FORCES comes to {forces}.")
+            raise DownwarpError(
+                "{needs} no end forces (END_FORCES 0), but END_FORCES comes to {forces}.", needs=needs, forces=forces
+            )
         if self.in_plane:
-            raise DownwarpError(f"{needs} no in-plane force, but IN_PLANE is {self.in_plane:g}.")
+            raise DownwarpError(
+                "{needs} no in-plane force, but IN_PLANE is {in_plane:g}.", needs=needs, in_plane=self.in_plane
+            )
         if self.fill_sinking_only:
-            raise DownwarpError(f"{needs} one infill everywhere: leave FILL_SINKING_ONLY out.")
+            raise DownwarpError("{needs} one infill everywhere: leave FILL_SINKING_ONLY out.", needs=needs)
         if self.zones > 1:
-            raise DownwarpError(f"{needs} one thickness, but TE_ZONES is {self.zones}.")
+            raise DownwarpError("{needs} one thickness, but TE_ZONES is {zones}.", needs=needs, zones=self.zones)
 
     def _check_zones(self) -> None:
         if self.zones not in (1, 2):
-            raise DownwarpError(f"TE_ZONES is {self.zones!r}; it takes 1 or 2.")
+            raise DownwarpError("TE_ZONES is {zones!r}; it takes 1 or 2.", zones=self.zones)
         for key, value in (("ZONE_CHANGE_FROM", self.zone_from), ("ZONE_CHANGE_TO", self.zone_to)):
             if value is not None:
                 check.number(key, value / 1e3, above=0)
         if self.zone_from is not None and self.zone_to is not None and self.zone_from > self.zone_to:
             raise DownwarpError(
-                f"ZONE_CHANGE_FROM ({self.zone_from / 1e3:g} km) must not be above ZONE_CHANGE_TO "
-                f"({self.zone_to / 1e3:g} km)."
+                "ZONE_CHANGE_FROM ({zone_from:g} km) must not be above ZONE_CHANGE_TO ({zone_to:g} km).",
+                zone_from=self.zone_from / 1e3,
+                zone_to=self.zone_to / 1e3,
             )
         if self.zones == 1:
             return
-        needs = "TE_ZONES is 2, which takes"
+        needs = say("TE_ZONES is 2, which takes")
         plate = self.chosen("plate")[0]
         if plate != BROKEN:
-            raise DownwarpError(f"{needs} a broken plate (PLATE 1), but PLATE comes to {plate}.")
+            raise DownwarpError(
+                "{needs} a broken plate (PLATE 1), but PLATE comes to {plate}.", needs=needs, plate=plate
+            )
         if self.chosen("break_at")[0] == BREAK_SEARCHED:
-            raise DownwarpError(f"{needs} a break that is held, but BREAK_AT is {BREAK_SEARCHED} (searched).")
+            raise DownwarpError(
+                "{needs} a break that is held, but BREAK_AT is {searched} (searched).",
+                needs=needs,
+                searched=BREAK_SEARCHED,
+            )
 
     @property
     def defaults(self) -> Setting:
@@ -220,7 +250,7 @@ class FitOptions:
         """Densities in use, kg/m3, and where each came from; ``bare`` where the DEM itself is the bent surface."""
         default = self.defaults
         infill = default.rho_infill_bare if bare else default.rho_infill
-        origins = {}
+        origins: dict[str, str] = {}
 
         def pick(name: str, given: float | None, otherwise: float) -> float:
             origins[name] = FROM_SETTING if given is None else GIVEN
@@ -251,6 +281,9 @@ class Densities:
         for key, value in (("RHO_INFILL", self.infill), ("RHO_UNDER_LOAD", self.under_load)):
             if value >= self.mantle:
                 raise DownwarpError(
-                    f"{key} ({value:g} kg/m3) must be below RHO_MANTLE ({self.mantle:g} kg/m3): "
-                    "otherwise nothing restores the plate."
+                    "{key} ({value:g} kg/m3) must be below RHO_MANTLE ({mantle:g} kg/m3): otherwise nothing restores "
+                    "the plate.",
+                    key=key,
+                    value=value,
+                    mantle=self.mantle,
                 )

@@ -99,8 +99,11 @@ class Sheet:
         alpha = float(flexural_parameter(rigidity, stiffness))
         if self.pad < LEAST_PAD * alpha:
             raise DownwarpError(
-                f"The plan view has {self.pad / 1e3:.0f} km beside it, too little for a flexural parameter of "
-                f"{alpha / 1e3:.0f} km: it takes {LEAST_PAD:g} of them."
+                "The plan view has {pad:.0f} km beside it, too little for a flexural parameter of {alpha:.0f} km: it "
+                "takes {least:g} of them.",
+                pad=self.pad / 1e3,
+                alpha=alpha / 1e3,
+                least=LEAST_PAD,
             )
         resistance, bent = self._room
         np.multiply(self._fourth, rigidity, out=resistance)
@@ -136,7 +139,9 @@ class SheetLine:
         for name, count in zip(("row", "column"), self.sheet.load.shape):
             values = check.finite_array(name, getattr(self, name), ndim=1)
             if values.size and (values.min() < 1 or values.max() > count - 2):
-                raise DownwarpError(f"A place lies outside the plan view, in its outermost cells or {name}s beyond.")
+                raise DownwarpError(
+                    "A place lies outside the plan view, in its outermost cells or {name}s beyond.", name=name
+                )
             object.__setattr__(self, name, values)
 
     @cached_property

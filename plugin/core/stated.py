@@ -12,6 +12,7 @@ from .elastic import Elastic
 from .errors import DownwarpError
 from .fit import complete_sigma
 from .settings import BROKEN, CONTINUOUS
+from .wording import say
 
 LEAST_STATIONS = 5
 """Stations that a plate has at least."""
@@ -59,12 +60,16 @@ class PlateStations:
 
     def __post_init__(self) -> None:
         object.__setattr__(
-            self, "distance", check.increasing(f"the distance of the stations of {self.name}", self.distance)
+            self,
+            "distance",
+            check.increasing(say("the distance of the stations of {transect}", transect=self.name), self.distance),
         )
         if int(self.on_plate.sum()) < LEAST_STATIONS:
             raise DownwarpError(
-                f"{self.name}: {int(self.on_plate.sum())} stations carry a plate (deflection_m); it takes at least "
-                f"{LEAST_STATIONS}."
+                "{transect}: {count} stations carry a plate (deflection_m); it takes at least {least}.",
+                transect=self.name,
+                count=int(self.on_plate.sum()),
+                least=LEAST_STATIONS,
             )
 
     @property
@@ -77,7 +82,9 @@ class PlateStations:
         at, values = self.distance[self.on_plate], values[self.on_plate]
         known = np.isfinite(values)
         if not known.any():
-            raise DownwarpError(f"{self.name}: {what} holds no number where there is a plate.")
+            raise DownwarpError(
+                "{transect}: {what} holds no number where there is a plate.", transect=self.name, what=what
+            )
         return np.interp(at, at[known], values[known])
 
     def largest_curvature(self) -> tuple[int, float, float]:
@@ -85,10 +92,14 @@ class PlateStations:
         size = np.where(self.on_plate & np.isfinite(self.curvature), np.abs(self.curvature), -1.0)
         index = int(np.argmax(size))
         if size[index] < 0:
-            raise DownwarpError(f"{self.name}: curvature_per_m holds no number where there is a plate.")
+            raise DownwarpError(
+                "{transect}: curvature_per_m holds no number where there is a plate.", transect=self.name
+            )
         thickness = float(self.thickness[index])
         if not np.isfinite(thickness):
-            raise DownwarpError(f"{self.name}: te_km is empty; the plate's thickness was not resolved.")
+            raise DownwarpError(
+                "{transect}: te_km is empty; the plate's thickness was not resolved.", transect=self.name
+            )
         return index, float(self.curvature[index]), thickness
 
     def section(self, crust: Crust, gravity: float, level: float | None = None) -> tuple[Section, tuple[str, ...]]:
@@ -101,19 +112,24 @@ class PlateStations:
         relief = self.relief[self.on_plate]
         if not np.isfinite(relief).all():
             relief = np.where(np.isfinite(relief), relief, predicted)
-            remarks += ("where dem_m is empty the predicted surface is taken for the relief",)
+            remarks += (say("where dem_m is empty the predicted surface is taken for the relief"),)
         load = np.nan_to_num(self.load[self.on_plate])
         under_load = load > 0
         if (load < 0).any():
-            remarks += ("the load was taken away: it does not attract, only the plate that rose does",)
+            remarks += (say("the load was taken away: it does not attract, only the plate that rose does"),)
         if under_load.any() and level is None:
             found = reference_levels(relief[under_load], load[under_load], crust, gravity)
             level = float(np.median(found))
             spread = float(np.ptp(np.quantile(found, [0.05, 0.95])))
             if spread > LEVEL_SPREAD:
                 remarks += (
-                    f"load_mpa does not follow from dem_m with RHO_LOAD {crust.load:g}, RHO_WATER {crust.water:g} "
-                    f"kg/m3 and GRAVITY {gravity:g} m/s2: give those that INPUT was made with",
+                    say(
+                        "load_mpa does not follow from dem_m with RHO_LOAD {load:g}, RHO_WATER {water:g} kg/m3 and "
+                        "GRAVITY {gravity:g} m/s2: give those that INPUT was made with",
+                        load=crust.load,
+                        water=crust.water,
+                        gravity=gravity,
+                    ),
                 )
         section = Section(at, relief, predicted + deflection, deflection, infill, under_load, level or 0.0)
         return section, remarks
@@ -138,8 +154,9 @@ class PlateStations:
             if np.abs(left).max() <= limit:
                 return count
         raise DownwarpError(
-            f"{self.name}: predicted_m plus deflection_m is no level, tilt or bow; INPUT takes stations of a fitted "
-            "plate."
+            "{transect}: predicted_m plus deflection_m is no level, tilt or bow; INPUT takes stations of a fitted "
+            "plate.",
+            transect=self.name,
         )
 
     def support(self, elastic: Elastic, mantle: float) -> tuple[int, bool, bool]:
@@ -150,7 +167,9 @@ class PlateStations:
         """
         first = int(np.flatnonzero(self.on_plate)[0])
         if not np.isfinite([self.slope[first], self.curvature[first], self.moment[first], self.shear[first]]).all():
-            raise DownwarpError(f"{self.name}: slope, curvature, moment or shear is empty where the plate begins.")
+            raise DownwarpError(
+                "{transect}: slope, curvature, moment or shear is empty where the plate begins.", transect=self.name
+            )
         stiffness = (mantle - self.infill[first]) * elastic.gravity
         p = np.sqrt(stiffness / elastic.rigidity(self.thickness[first]))
         s = np.sqrt(2.0 * p)
@@ -172,9 +191,12 @@ class PlateStations:
             ratio = np.nanmedian(-self.moment[bent] / self.curvature[bent] / elastic.rigidity(self.thickness[bent]))
         if not np.isfinite(ratio) or abs(ratio - 1.0) <= AGREES:
             return ""
-        return (
-            f"moments in INPUT are {ratio:.3g} times those of YOUNG_GPA {elastic.young / 1e9:g} and POISSON "
-            f"{elastic.poisson:g}: give the constants that INPUT was made with"
+        return say(
+            "moments in INPUT are {ratio:.3g} times those of YOUNG_GPA {young:g} and POISSON {poisson:g}: give "
+            "the constants that INPUT was made with",
+            ratio=ratio,
+            young=elastic.young / 1e9,
+            poisson=elastic.poisson,
         )
 
 

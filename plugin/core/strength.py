@@ -49,6 +49,7 @@ from .constants import (
 from .cooling import STEADY, Geotherm
 from .elastic import Elastic
 from .errors import DownwarpError
+from .wording import say
 
 OCEANIC, CONTINENTAL = range(2)
 """What the plate is made of, in the order of the key ROCK: dry olivine throughout, or below a crust of dry
@@ -83,7 +84,7 @@ class Rock:
 
     def __post_init__(self) -> None:
         if self.kind not in (OCEANIC, CONTINENTAL):
-            raise DownwarpError(f"ROCK is {self.kind!r}; it takes 0 or 1.")
+            raise DownwarpError("ROCK is {kind!r}; it takes 0 or 1.", kind=self.kind)
         check.number("CRUST_KM", self.crust / 1e3, at_least=0, at_most=200)
         check.number("RHO_CRUST", self.rho_crust, above=0, at_most=20000)
         check.number("RHO_MANTLE", self.rho_mantle, above=0, at_most=20000)
@@ -228,8 +229,11 @@ def bend_envelope(strength: Envelope, curvature: float, elastic: Elastic, in_pla
         return BentPlate(0.0, math.nan, np.zeros(depth.shape), 0.0)
     if not force(low) < 0.0 < force(high):
         raise DownwarpError(
-            f"IN_PLANE is {in_plane:g} N/m, more than the {-force(low) + in_plane:.3g} (compression) or "
-            f"{force(high) - in_plane:.3g} N/m (tension) that the plate's strength carries."
+            "IN_PLANE is {in_plane:g} N/m, more than the {compression:.3g} (compression) or {tension:.3g} N/m "
+            "(tension) that the plate's strength carries.",
+            in_plane=in_plane,
+            compression=-force(low) + in_plane,
+            tension=force(high) - in_plane,
         )
     neutral = brentq(force, low, high, xtol=1e-6, rtol=1e-14)
     found = stress(neutral)
@@ -331,7 +335,7 @@ def weigh(
     rock: Rock, geotherm: Geotherm, curvature: float, thickness: float, elastic: Elastic, in_plane: float = 0.0
 ) -> StrengthVerdict:
     """Compare an elastic plate of ``thickness`` (m), bent to ``curvature`` (1/m), with the strength of its age."""
-    thickness = check.number("the elastic thickness in km", thickness / 1e3, above=0) * 1e3
+    thickness = check.number(say("the elastic thickness in km"), thickness / 1e3, above=0) * 1e3
     curvature = check.number("curvature", curvature)
     if curvature == 0.0:
         raise DownwarpError("The plate is not bent: its curvature is 0 everywhere, and any strength carries it.")

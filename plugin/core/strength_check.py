@@ -11,8 +11,9 @@ from .cooling import Geotherm
 from .elastic import Elastic
 from .stated import PlateStations
 from .strength import MomentCurve, Rock, StrengthVerdict, moment_curve, weigh
+from .wording import say
 
-CARRIED, YIELDING, TOO_MUCH = "carried", "carried with yielding", "not carried"
+CARRIED, YIELDING, TOO_MUCH = say("carried"), say("carried with yielding"), say("not carried")
 """Verdicts."""
 ELASTIC_SHARE = 0.1
 """Share of the plate's thickness up to which overstress counts as skin: rock at the surface has no strength at all."""
@@ -54,22 +55,26 @@ def check_strength(
     if found.moment_share >= 1.0:
         words = TOO_MUCH
         remarks.append(
-            "no plate of this strength carries the moment of the fitted one: thickness, curvature, age or rock is "
-            "wrong, or the plate is weakened or broken there"
+            say(
+                "no plate of this strength carries the moment of the fitted one: thickness, curvature, age or rock is "
+                "wrong, or the plate is weakened or broken there"
+            )
         )
     elif found.overstressed <= ELASTIC_SHARE:
         words = CARRIED
     else:
         words = YIELDING
     if found.expected_thickness < (1.0 - NEAR) * thickness:
-        remarks.append("the fitted plate is stiffer than its strength allows at this curvature")
+        remarks.append(say("the fitted plate is stiffer than its strength allows at this curvature"))
     elif found.expected_thickness > (1.0 + NEAR) * thickness:
         remarks.append(
-            "the fitted plate is weaker than its strength at this curvature: hotter, faulted, inherited from an "
-            "earlier age, or fitted too thin"
+            say(
+                "the fitted plate is weaker than its strength at this curvature: hotter, faulted, inherited from an "
+                "earlier age, or fitted too thin"
+            )
         )
     if found.geotherm_of_fit is None:
-        remarks.append("no geotherm of this kind gives the fitted thickness at this curvature")
+        remarks.append(say("no geotherm of this kind gives the fitted thickness at this curvature"))
     low, high = 0.02 * abs(curvature), 20.0 * abs(curvature)
     curve = moment_curve(found.strength, elastic, float(np.sign(curvature)), low, high, in_plane)
     at_end = index in (int(stations[0]), int(stations[-1]))

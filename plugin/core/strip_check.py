@@ -23,6 +23,7 @@ from .problem import Problem, prepare
 from .profile import Profile
 from .result import Bent
 from .settings import CONTINUOUS, FORCES_NONE, STRIP, FitOptions
+from .wording import Said, say
 
 ENOUGH, ROUGH = 0.05, 0.15
 """Errors of deepest deflection and thickness up to which a strip is called enough, and rough: our own choice, beside
@@ -73,7 +74,7 @@ class StripCheck:
 def strip_options(options: FitOptions) -> FitOptions:
     """The options with what a plan view cannot have taken out: a continuous plate without end or in-plane forces."""
     if options.in_plane:
-        raise DownwarpError(f"IN_PLANE is {options.in_plane:g}; a plan view takes no in-plane force.")
+        raise DownwarpError("IN_PLANE is {in_plane:g}; a plan view takes no in-plane force.", in_plane=options.in_plane)
     if options.fill_sinking_only or options.rho_under_load is not None:
         raise DownwarpError("A plan view takes one infill density: leave RHO_UNDER_LOAD and FILL_SINKING_ONLY out.")
     return replace(options, plate=CONTINUOUS, end_forces=FORCES_NONE, load_shape=STRIP)
@@ -98,15 +99,20 @@ def check_strip(profile: Profile, plan: PlanRelief, options: FitOptions, thickne
     surplus = float(load.sum() / problem.load.sum() - 1.0)
     if abs(surplus) > SAME_LOAD:
         remarks += (
-            f"the load as mapped is {_percent(surplus, 'larger', 'smaller')} along the line than the strip's: give "
-            "LOAD_AREA or REFERENCE_LEVEL so that both count the same relief",
+            say(
+                "the load as mapped is {percent} along the line than the strip's: give LOAD_AREA or REFERENCE_LEVEL so "
+                "that both count the same relief",
+                percent=_percent(surplus, say("{percent:.0f} % larger"), say("{percent:.0f} % smaller")),
+            ),
         )
     markers = markers_between(profile.distance, deflection, _side(strip.markers))
     found = strip_thickness(problem, deflection, thickness)
     if found is None:
         remarks += (
-            f"no strip within a factor of {THICKNESS_FACTOR:g} of the thickness follows the load as mapped outside the "
-            "load",
+            say(
+                "no strip within a factor of {factor:g} of the thickness follows the load as mapped outside the load",
+                factor=THICKNESS_FACTOR,
+            ),
         )
     deepest = _ratio(strip.markers.deepest, markers.deepest)
     return StripCheck(
@@ -130,12 +136,16 @@ def strip_remarks(checked: StripCheck, low: float | None, high: float | None) ->
     that is open is None); ``checked``: the check of the plate that was fitted."""
     fitted, found = checked.strip.thickness, checked.strip_thickness
     if found is None:
-        return ("the load is no strip: none follows its deflection as mapped; fit it as mapped",)
+        return (say("the load is no strip: none follows its deflection as mapped; fit it as mapped"),)
     if (low is None or found >= low) and (high is None or found <= high):
         return ()
     return (
-        f"the load is no strip: fitted with one, a plate of {fitted / 1e3:.3g} km comes out as {found / 1e3:.3g} km, "
-        "outside the interval; fit it as mapped",
+        say(
+            "the load is no strip: fitted with one, a plate of {fitted:.3g} km comes out as {found:.3g} km, outside the "
+            "interval; fit it as mapped",
+            fitted=fitted / 1e3,
+            found=found / 1e3,
+        ),
     )
 
 
@@ -153,37 +163,46 @@ def strip_thickness(problem: Problem, deflection: np.ndarray, thickness: float) 
     surface = -deflection[outside]
     regional, _ = np.linalg.qr(model.regional_columns(at))
 
-    def misfit(log_thickness: float) -> float:
-        offset, _ = model.columns(float(np.exp(log_thickness)), 0.0, at)
-        left = surface - offset
-        left = left - regional @ (regional.T @ left)
-        return float(left @ left)
+    def misfit(log_thickness) -> np.ndarray:
+        left = surface - model.columns(np.exp(np.atleast_1d(log_thickness)), 0.0, at)[0]
+        left -= left @ regional @ regional.T
+        return (left**2).sum(axis=1)
 
     grid = np.log(thickness) + np.linspace(-1.0, 1.0, 25) * np.log(THICKNESS_FACTOR)
-    best = int(np.argmin([misfit(each) for each in grid]))
+    best = int(np.argmin(misfit(grid)))
     if best in (0, grid.size - 1):
         return None
-    found = minimize_scalar(misfit, bounds=(grid[best - 1], grid[best + 1]), method="bounded")
+    found = minimize_scalar(
+        lambda each: float(misfit(each)[0]), bounds=(grid[best - 1], grid[best + 1]), method="bounded"
+    )
     return float(np.exp(found.x))
 
 
 def verdict(deepest_error: float | None, thickness_error: float | None) -> str:
     """What the errors of a strip come to, in words."""
     if deepest_error is None:
-        return "nothing to tell: the plate does not bend on this line"
-    depth = f"it makes the deepest deflection {_percent(deepest_error, 'too deep', 'too shallow')}"
+        return say("nothing to tell: the plate does not bend on this line")
+    depth = _percent(deepest_error, say("{percent:.0f} % too deep"), say("{percent:.0f} % too shallow"))
     if thickness_error is None:
-        return f"a strip is wrong here: {depth}, and no strip follows the deflection outside the load"
-    words = f"{depth}, and a thickness fitted with it comes out {_percent(thickness_error, 'too large', 'too small')}"
+        return say(
+            "a strip is wrong here: it makes the deepest deflection {depth}, and no strip follows the deflection outside "
+            "the load",
+            depth=depth,
+        )
     worst = max(abs(deepest_error), abs(thickness_error))
-    kind = "enough" if worst <= ENOUGH else "rough" if worst <= ROUGH else "wrong"
-    return f"a strip is {kind} here: {words}"
+    kind = say("enough") if worst <= ENOUGH else say("rough") if worst <= ROUGH else say("wrong")
+    return say(
+        "a strip is {kind} here: it makes the deepest deflection {depth}, and a thickness fitted with it comes out "
+        "{thickness}",
+        kind=kind,
+        depth=depth,
+        thickness=_percent(thickness_error, say("{percent:.0f} % too large"), say("{percent:.0f} % too small")),
+    )
 
 
-def _percent(error: float, above: str, below: str) -> str:
-    if abs(error) < 0.005:
-        return "right to 1 %"
-    return f"{100 * abs(error):.0f} % {above if error > 0 else below}"
+def _percent(error: float, above: Said, below: Said) -> Said:
+    """A relative error in words; ``above`` and ``below`` are said of its size in percent."""
+    return say("right to 1 %") if abs(error) < 0.005 else say(above if error > 0 else below, percent=100 * abs(error))
 
 
 def _ratio(strip: Place | None, mapped: Place | None) -> float | None:

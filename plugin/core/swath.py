@@ -60,7 +60,7 @@ def offsets(width: float, strips: int) -> np.ndarray:
     width = check.number("SWATH_KM", width / 1e3, at_least=0) * 1e3
     strips_given = check.number("SWATH_LINES", strips, at_least=1)
     if strips_given != int(strips_given):
-        raise DownwarpError(f"SWATH_LINES is {strips_given:g}; it takes a whole number.")
+        raise DownwarpError("SWATH_LINES is {strips_given:g}; it takes a whole number.", strips_given=strips_given)
     return width * ((np.arange(int(strips_given)) + 0.5) / strips_given - 0.5)
 
 
@@ -130,11 +130,17 @@ def align(
     values = _strips(values)
     distance = check.increasing("distance", distance)
     if values.shape[1] != distance.size:
-        raise DownwarpError(f"values hold {values.shape[1]} stations and distance {distance.size}; it takes as many.")
+        raise DownwarpError(
+            "values hold {columns} stations and distance {count}; it takes as many.",
+            columns=values.shape[1],
+            count=distance.size,
+        )
     low = distance[0] if search_from is None else check.number("search_from", search_from)
     high = distance[-1] if search_to is None else check.number("search_to", search_to)
     if low >= high:
-        raise DownwarpError(f"The search for the lowest point runs from {low:g} to {high:g} m; it takes an increase.")
+        raise DownwarpError(
+            "The search for the lowest point runs from {low:g} to {high:g} m; it takes an increase.", low=low, high=high
+        )
     searched = np.isfinite(values) & (distance >= low) & (distance <= high)
     depth = np.where(searched, values, np.inf)
     lowest = searched & (depth == depth.min(axis=1, keepdims=True))
@@ -144,8 +150,10 @@ def align(
     used = searched.any(axis=1) & (at > first) & (at < last)
     if not used.any():
         raise DownwarpError(
-            f"SWATH_ALIGN finds no lowest point between {low / 1e3:g} and {high / 1e3:g} km: every strip is lowest "
-            "at an end; let the line begin before the axis."
+            "SWATH_ALIGN finds no lowest point between {low:g} and {high:g} km: every strip is lowest at an end; let "
+            "the line begin before the axis.",
+            low=low / 1e3,
+            high=high / 1e3,
         )
     position = np.where(used, distance[at], np.nan)
     common = float(np.mean(distance[at][used]))
@@ -160,7 +168,11 @@ def shifted(values: np.ndarray, alignment: Alignment) -> np.ndarray:
     """
     values = _strips(values)
     if values.shape[0] != alignment.shift.size:
-        raise DownwarpError(f"values hold {values.shape[0]} strips; the alignment is of {alignment.shift.size}.")
+        raise DownwarpError(
+            "values hold {rows} strips; the alignment is of {strips}.",
+            rows=values.shape[0],
+            strips=alignment.shift.size,
+        )
     stations = values.shape[1]
     # Rounded to a billionth of a step, so that a whole number of steps is one.
     shift = np.round(np.where(alignment.used, alignment.shift, 0.0), 9)[:, None]
@@ -182,5 +194,5 @@ def _take(values: np.ndarray, index: np.ndarray) -> np.ndarray:
 def _strips(values: np.ndarray) -> np.ndarray:
     values = np.asarray(values, dtype=float)
     if values.ndim != 2 or values.shape[0] < 1:
-        raise DownwarpError(f"values have shape {values.shape}; it takes (strips, stations).")
+        raise DownwarpError("values have shape {shape}; it takes (strips, stations).", shape=values.shape)
     return values

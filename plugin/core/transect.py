@@ -16,7 +16,9 @@ from pyproj import Geod
 from scipy.spatial import cKDTree
 
 from . import check
+from .by_pyproj import in_shape
 from .errors import DownwarpError
+from .wording import say
 
 MOST_STATIONS = 200_000
 """Stations that one transect may have."""
@@ -70,20 +72,27 @@ class Transect:
     """The ellipsoid on which the vertices lie."""
 
     def __post_init__(self) -> None:
-        vertices = check.finite_array(f"Transect {self.name}", self.vertices)
+        vertices = check.finite_array(say("Transect {transect}", transect=self.name), self.vertices)
         if vertices.ndim != 2 or vertices.shape[1] != 2:
-            raise DownwarpError(f"Transect {self.name} has vertices of shape {vertices.shape}; it takes (n, 2).")
+            raise DownwarpError(
+                "Transect {transect} has vertices of shape {shape}; it takes (n, 2).",
+                transect=self.name,
+                shape=vertices.shape,
+            )
         if vertices.size and np.abs(vertices[:, 1]).max() > 90.0:
             raise DownwarpError(
-                f"Transect {self.name} has a latitude of {vertices[np.abs(vertices[:, 1]).argmax(), 1]:g} degrees; "
-                "latitudes run from -90 to 90."
+                "Transect {transect} has a latitude of {latitude:g} degrees; latitudes run from -90 to 90.",
+                transect=self.name,
+                latitude=vertices[np.abs(vertices[:, 1]).argmax(), 1],
             )
         if len(vertices) > 1:
             longitude, latitude = vertices.T
             _, _, lengths = self._inverse(longitude[:-1], latitude[:-1], longitude[1:], latitude[1:])
             vertices = vertices[np.concatenate([[True], lengths > _SAME_PLACE])]
         if len(vertices) < 2:
-            raise DownwarpError(f"Transect {self.name} has fewer than two different vertices, hence no length.")
+            raise DownwarpError(
+                "Transect {transect} has fewer than two different vertices, hence no length.", transect=self.name
+            )
         object.__setattr__(
             self, "vertices", np.column_stack([np.unwrap(vertices[:, 0], period=360.0), vertices[:, 1]])
         )
@@ -126,8 +135,13 @@ class Transect:
         intervals = max(1.0, np.round(np.round(self.length / step, 6)))
         if intervals + 1 > MOST_STATIONS:
             raise DownwarpError(
-                f"STEP_KM is {step / 1e3:g}: transect {self.name} of {self.length / 1e3:.1f} km would have "
-                f"{intervals + 1:.0f} stations; it may have {MOST_STATIONS}."
+                "STEP_KM is {step:g}: transect {transect} of {length:.1f} km would have {count:.0f} stations; it may "
+                "have {most}.",
+                step=step / 1e3,
+                transect=self.name,
+                length=self.length / 1e3,
+                count=intervals + 1,
+                most=MOST_STATIONS,
             )
         distance = np.linspace(0.0, self.length, int(intervals) + 1)
         before = self._leg_at(distance - _SAME_PLACE)
@@ -255,22 +269,15 @@ class Transect:
         )
         return longitude, latitude, back + 180.0
 
-    # pyproj 3.5 returns scalars for arrays of one element, and later ones warn of them; below, arrays stay arrays.
-
     def _inverse(self, *places: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Azimuth at the start, back azimuth at the end, and length of geodesics between places (`Geod.inv`)."""
-        azimuth, back, length = (np.atleast_1d(values) for values in self.ellipsoid.inv(*_plain(places)))
+        azimuth, back, length = in_shape(self.ellipsoid.inv, *places)
         return azimuth, back, length
 
     def _direct(self, *places: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Longitude, latitude and back azimuth at the ends of geodesics of given azimuth and length (`Geod.fwd`)."""
-        longitude, latitude, back = (np.atleast_1d(values) for values in self.ellipsoid.fwd(*_plain(places)))
+        longitude, latitude, back = in_shape(self.ellipsoid.fwd, *places)
         return longitude, latitude, back
-
-
-def _plain(places: tuple[np.ndarray, ...]) -> list:
-    """Arrays, those of one element as the number in them."""
-    return [values.item() if np.size(values) == 1 else values for values in map(np.asarray, places)]
 
 
 def _between_half_turns(angle: np.ndarray) -> np.ndarray:

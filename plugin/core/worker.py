@@ -46,7 +46,7 @@ def main() -> None:
         try:
             answer = ("done", fit_profile(*job))
         except expected as error:
-            answer = ("failed", str(error))
+            answer = ("failed", error.message)
         except Exception:
             answer = ("broken", traceback.format_exc())
         pickle.dump(answer, answers, protocol=pickle.HIGHEST_PROTOCOL)

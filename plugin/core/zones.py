@@ -20,6 +20,7 @@ from .forward import TransectModel
 from .plate import gauss_positions
 from .posterior import OPEN, Interval, Posterior
 from .settings import BROKEN
+from .wording import say
 
 LEAST_SHARE = 0.2
 """Thickness near the break over that beyond, at least, in a search."""
@@ -57,8 +58,8 @@ class ZonedModel(TransectModel):
     """Distance of the change from the break, m."""
 
     def __post_init__(self) -> None:
-        check.number("the share of the thickness", self.share, above=0)
-        check.number("the distance of the change", self.change, at_least=0)
+        check.number(say("the share of the thickness"), self.share, above=0)
+        check.number(say("the distance of the change"), self.change, at_least=0)
 
     def thickness_jumps(self, break_position: float) -> np.ndarray:
         """The place of the change, m."""
@@ -83,9 +84,13 @@ class VaryingModel(TransectModel):
     """Elastic thickness at the stations, m, or its share of the searched one, linear between them, shape (n,)."""
 
     def __post_init__(self) -> None:
-        along = check.finite_array("the elastic thickness along the line", self.along, ndim=1)
+        along = check.finite_array(say("the elastic thickness along the line"), self.along, ndim=1)
         if along.shape != self.distance.shape:
-            raise DownwarpError(f"The elastic thickness has {along.size} values for {self.distance.size} stations.")
+            raise DownwarpError(
+                "The elastic thickness has {count} values for {stations} stations.",
+                count=along.size,
+                stations=self.distance.size,
+            )
         if not (along > 0).all():
             raise DownwarpError("The elastic thickness must be above 0 everywhere along the line.")
 
@@ -152,8 +157,8 @@ class ZoneSearch:
     """The search that this one refines; None where it is the first."""
 
     def __post_init__(self) -> None:
-        object.__setattr__(self, "shares", check.increasing("the shares", self.shares))
-        object.__setattr__(self, "changes", check.increasing("the distances of the change", self.changes))
+        object.__setattr__(self, "shares", check.increasing(say("the shares"), self.shares))
+        object.__setattr__(self, "changes", check.increasing(say("the distances of the change"), self.changes))
         if self.shares[0] <= 0 or self.changes[0] < 0:
             raise DownwarpError("Shares of the thickness must be above 0, distances of its change 0 or more.")
 

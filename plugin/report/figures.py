@@ -16,6 +16,8 @@ import numpy as np
 
 from ..core.result import Bent, ChoiceRow, Estimate, Fit, FitResult, MisfitRow
 from ..core.settings import LOAD_RELIEF, PLATE_NAMES
+from ..core.wording import say
+from ..translation import tr, translated
 from .words import interval_words, is_resolved, number, stated
 
 INK = "#26343a"
@@ -51,7 +53,7 @@ _DOT = {"linestyle": "none", "marker": "o", "markersize": 2.8}
 _FITTED = {**_DOT, "color": INK, "markeredgewidth": 0.0}
 _NOT_FITTED = {**_DOT, "markerfacecolor": "white", "markeredgecolor": FAINT, "markeredgewidth": 0.6}
 _PICK = {"linestyle": "none", "marker": "x", "markersize": 5, "color": INK}
-_PREDICTED = {"color": PLATE, "linewidth": 2.0, "label": "predicted surface"}
+_PREDICTED = {"color": PLATE, "linewidth": 2.0}
 _LOADED = {"facecolor": LOAD_PALE, "edgecolor": LOAD, "hatch": "////", "linewidth": 0.0}
 _BAND = {"facecolor": PLATE_PALE, "edgecolor": PLATE, "linewidth": 0.6, "linestyle": ":"}
 _INTERVAL = {"facecolor": PLATE_PALE, "edgecolor": PLATE, "hatch": "\\\\\\\\", "linewidth": 0.0}
@@ -65,7 +67,7 @@ def missing_package() -> str:
     try:
         import matplotlib.figure  # noqa: F401
     except ImportError:
-        return (
+        return tr(
             "Figures need the Python package matplotlib, which this QGIS does not have. On Debian and Ubuntu: sudo apt "
             "install python3-matplotlib. Elsewhere, in the shell of this QGIS: python3 -m pip install matplotlib. "
             "Then start QGIS again."
@@ -164,6 +166,8 @@ class ProfileAxes:
 
 MARKER_STYLES = {"break": ("|", LOAD), "deepest": ("v", PLATE), "node": ("D", "white"), "bulge": ("^", PLATE)}
 """Marker and face colour of each marked place."""
+PLACE_WORDS = {"break": say("break"), "deepest": say("deepest"), "node": say("node"), "bulge": say("bulge")}
+"""What each of them is called."""
 
 
 def marked_places(bent: Bent) -> dict[str, tuple[float, float | None]]:
@@ -180,7 +184,9 @@ def marked_places(bent: Bent) -> dict[str, tuple[float, float | None]]:
 
 def place_words(kind: str, deflection: float | None) -> str:
     """What a marked place is called: of a raised plate the point of largest deflection is its highest."""
-    return "highest" if kind == "deepest" and deflection is not None and deflection < 0 else kind
+    if kind == "deepest" and deflection is not None and deflection < 0:
+        return tr("highest")
+    return translated(PLACE_WORDS[kind])
 
 
 def _deflection_at(bent: Bent, distance: float) -> float | None:
@@ -220,12 +226,12 @@ def profile_axes(figure: Any, bent: Bent, rms: float | None = None, legend: bool
     _draw_residuals(residual, bent, km, rms)
     if load is not None:
         load.fill_between(km, 0.0, stations.load / 1e6, **_LOADED)
-        _name(load, y="load, MPa")
+        _name(load, y=tr("load, MPa"))
         load.tick_params(labelbottom=False)
     surface.tick_params(labelbottom=False)
     surface.set_xlim(km[0], km[-1])
-    _name(surface, y="elevation, m")
-    _name(residual, x="distance from the line's start, km", y="residual, m")
+    _name(surface, y=tr("elevation, m"))
+    _name(residual, x=tr("distance from the line's start, km"), y=tr("residual, m"))
     # The legend below takes as much room as it has rows.
     columns = max(1, int(width / 2.2))
     room = min(0.6, (0.55 + (0.17 * -(-len(handles) // columns) if legend else 0.0)) / height)
@@ -243,7 +249,9 @@ def _thinned(chosen: np.ndarray) -> tuple[np.ndarray, str]:
     """Indices of at most `MOST_DOTS` stations, and words for the legend on what was left out."""
     indices = np.flatnonzero(chosen)
     every = -(-indices.size // MOST_DOTS)
-    words = {0: "", 1: "", 2: " (every 2nd)", 3: " (every 3rd)"}.get(every, f" (every {every}th)")
+    words = {0: "", 1: "", 2: tr(" (every 2nd)"), 3: tr(" (every 3rd)")}.get(
+        every, tr(" (every {count}th)", count=every)
+    )
     return indices[:: max(every, 1)], words
 
 
@@ -266,23 +274,23 @@ def _draw_surfaces(axes: Any, bent: Bent, km: np.ndarray, relief_is_load: bool) 
     some = slice(None, None, max(1, km.size // MOST_CORNERS))
     if relief_is_load or problem.bare:
         shown = _outline(profile.relief)
-        relief = {"color": FAINT, "linewidth": 1.0, "label": "relief (DEM)", "zorder": 2}
+        relief = {"color": FAINT, "linewidth": 1.0, "label": tr("relief (DEM)"), "zorder": 2}
         handles += axes.plot(km[shown], profile.relief[shown], **relief)
     level = problem.reference_level
     if relief_is_load and level is not None and problem.under_load.any():
         top = np.nan_to_num(profile.relief, nan=level)[some]
         shaded = axes.fill_between(km[some], level, top, where=problem.under_load[some], zorder=1, **_LOADED)
-        shaded.set_label(f"load, above {number(level, 4)} m")
+        shaded.set_label(tr("load, above {level} m", level=number(level, 4)))
         handles.append(shaded)
     if np.isfinite(stations.predicted_low).any():
         sides = stations.predicted_low[some], stations.predicted_high[some]
         band = axes.fill_between(km[some], *sides, zorder=3, **_BAND)
-        band.set_label(f"its {stated(problem.options.confidence * 100)} % band")
+        band.set_label(tr("its {confidence} % band", confidence=stated(problem.options.confidence * 100)))
         handles.append(band)
     seen = np.isfinite(stations.observed)
     for chosen, words, style, order in (
-        (seen & ~stations.in_fit, "observed, not fitted", _NOT_FITTED, 4),
-        (seen & stations.in_fit, "observed, fitted", _FITTED, 5),
+        (seen & ~stations.in_fit, tr("observed, not fitted"), _NOT_FITTED, 4),
+        (seen & stations.in_fit, tr("observed, fitted"), _FITTED, 5),
     ):
         some_of, left_out = _thinned(chosen)
         if some_of.size:
@@ -290,10 +298,10 @@ def _draw_surfaces(axes: Any, bent: Bent, km: np.ndarray, relief_is_load: bool) 
     picks = profile.picks
     if picks.distance.size:
         sigma = np.nan_to_num(picks.sigma)
-        bars = {"yerr": sigma, "elinewidth": 0.8, "label": "picks", "zorder": 6, **_PICK}
+        bars = {"yerr": sigma, "elinewidth": 0.8, "label": tr("picks"), "zorder": 6, **_PICK}
         handles.append(axes.errorbar(picks.distance / 1e3, picks.elevation, **bars))
     shown = _outline(stations.predicted)
-    handles += axes.plot(km[shown], stations.predicted[shown], zorder=7, **_PREDICTED)
+    handles += axes.plot(km[shown], stations.predicted[shown], label=tr("predicted surface"), zorder=7, **_PREDICTED)
     return handles + _draw_markers(axes, bent)
 
 
@@ -301,9 +309,11 @@ def _draw_markers(axes: Any, bent: Bent) -> list[Any]:
     """Draw the marked places on the predicted surface; their values stand in the legend, where they never overlap."""
     handles = []
     for kind, (distance, deflection) in marked_places(bent).items():
-        words = f"{place_words(kind, deflection)}, {number(distance / 1e3)} km"
+        told = {"place": place_words(kind, deflection), "distance": number(distance / 1e3)}
         if kind in ("deepest", "bulge") and deflection is not None:
-            words += f": {number(abs(deflection))} m"
+            words = tr("{place}, {distance} km: {deflection} m", deflection=number(abs(deflection)), **told)
+        else:
+            words = tr("{place}, {distance} km", **told)
         if kind == "break":
             line = axes.axvline(distance / 1e3, color=LOAD, linewidth=1.4, linestyle=(0, (5, 1.5, 1, 1.5)), zorder=6)
             line.set_label(words)
@@ -327,7 +337,7 @@ def _draw_residuals(axes: Any, bent: Bent, km: np.ndarray, rms: float | None) ->
         for side in (-rms, rms):
             axes.axhline(side, color=FAINT, linewidth=0.8, linestyle="--", zorder=1)
         axes.annotate(
-            f"dashed: rms {number(rms)} m", (0.995, 0.97), xycoords="axes fraction", ha="right", va="top",
+            tr("dashed: rms {rms} m", rms=number(rms)), (0.995, 0.97), xycoords="axes fraction", ha="right", va="top",
             fontsize=_TEXT - 1, color=INK, zorder=6, bbox=_PLAQUE,
         )  # fmt: skip
     other, _ = _thinned(known & ~stations.in_fit)
@@ -424,16 +434,20 @@ def posterior_figure(result: FitResult) -> Any | None:
     for (fit, density), style in zip(drawn, ("-", "--")):
         km = density.thickness / 1e3
         line = {"color": PLATE, "linewidth": 2.0} if fit is best else {"color": INK, "linewidth": 1.2}
-        axes.plot(km, density.density, linestyle=style, label=f"{PLATE_NAMES[fit.kind]} plate", zorder=4, **line)
+        words = tr("{kind} plate", kind=PLATE_NAMES[fit.kind])
+        axes.plot(km, density.density, linestyle=style, label=words, zorder=4, **line)
         if fit is best and is_resolved(fit) and fit.thickness.value is not None:
             low = km[0] if fit.thickness.low is None else fit.thickness.low / 1e3
             high = km[-1] if fit.thickness.high is None else fit.thickness.high / 1e3
             inside = np.union1d(km[(km > low) & (km < high)], [low, high])
             shaded = axes.fill_between(inside, 0.0, np.interp(inside, km, density.density), zorder=2, **_INTERVAL)
-            words = interval_words(fit.thickness, "km", 1e3)
-            shaded.set_label(f"{stated(options.confidence * 100)} % interval, {words}")
+            told = {
+                "confidence": stated(options.confidence * 100),
+                "interval": interval_words(fit.thickness, "km", 1e3),
+            }
+            shaded.set_label(tr("{confidence} % interval, {interval}", **told))
             value = fit.thickness.value / 1e3
-            words = f"most probable, {number(value)} km"
+            words = tr("most probable, {value} km", value=number(value))
             axes.axvline(value, color=LOAD, linewidth=1.4, linestyle=(0, (5, 1.5)), zorder=5, label=words)
     heard = [density.thickness[density.density > 1e-3] / 1e3 for _, density in drawn]
     low = max(options.te_from / 1e3, min(each.min() for each in heard) / 1.3)
@@ -441,7 +455,7 @@ def posterior_figure(result: FitResult) -> Any | None:
     _log_km(axes, "x", low, high)
     axes.set_ylim(0.0, 1.06)
     axes.set_yticks([0.0, 0.5, 1.0])
-    _name(axes, "elastic thickness, km (logarithmic)", "density over its peak")
+    _name(axes, tr("elastic thickness, km (logarithmic)"), tr("density over its peak"))
     axes.legend(ncol=2 if rows == 2 else 3, **_ABOVE)
     return figure
 
@@ -482,22 +496,22 @@ def misfit_figure(fit: Fit) -> Any | None:
         bar = figure.colorbar(filled, cax=figure.add_axes((0.865, 0.145, 0.022, 0.74)), spacing="uniform", ticks=levels)
         bar.ax.set_yticklabels([number(level) for level in levels])
         bar.ax.tick_params(labelsize=_TEXT - 0.5, colors=INK, length=2)
-        bar.set_label("rms residual, m", size=_TEXT, color=INK)
+        bar.set_label(tr("rms residual, m"), size=_TEXT, color=INK)
         bar.outline.set_edgecolor(FAINT)
     handles = []
     for share, style in ((0.5, "-"), (0.1, "--"), (0.01, ":")):
         if np.ma.min(log_likelihood) < np.log(share) < np.ma.max(log_likelihood):
             level = {"levels": [np.log(share)], "colors": [LOAD], "linestyles": [style], "linewidths": 1.8}
             axes.contour(te_km, break_km, log_likelihood, **level)
-            words = f"likelihood {share:g} of its peak"
+            words = tr("likelihood {share:g} of its peak", share=share)
             handles.append(Line2D([], [], color=LOAD, linestyle=style, linewidth=1.8, label=words))
     if fit.break_position.value is not None and fit.thickness.value is not None:
         handles += axes.plot(
             [fit.thickness.value / 1e3], [fit.break_position.value / 1e3], linestyle="none", marker="P", markersize=9,
-            markerfacecolor="white", markeredgecolor=INK, label="most probable", clip_on=False, zorder=5,
+            markerfacecolor="white", markeredgecolor=INK, label=tr("most probable"), clip_on=False, zorder=5,
         )  # fmt: skip
     _log_km(axes, "x", float(te_km[0]), float(te_km[-1]))
-    _name(axes, "elastic thickness, km (logarithmic)", "break, km from the line's start")
+    _name(axes, tr("elastic thickness, km (logarithmic)"), tr("break, km from the line's start"))
     axes.legend(handles=handles, ncol=4, **{**_ABOVE, "fontsize": _TEXT - 0.5, "columnspacing": 1.2})
     return figure
 
@@ -559,18 +573,18 @@ def choices_figure(result: FitResult) -> Any | None:
     for place, row in enumerate(rows):
         if row.thickness.value is None or (row.thickness.low is None and row.thickness.high is None):
             middle = np.sqrt(limits[0] * limits[1])
-            axes.text(middle, place, "not resolved", ha="center", va="center", fontsize=_TEXT, color=INK)
+            axes.text(middle, place, tr("not resolved"), ha="center", va="center", fontsize=_TEXT, color=INK)
         else:
             colours = (PLATE, PLATE) if place == 0 else (INK, "white")
             _interval_bar(axes, place, row.thickness, limits, False, color=colours[0], face=colours[1])
     axes.set_yticks(range(len(rows)))
-    labels = [f"{row.choice}: {row.option}" if row.option else row.choice for row in rows]
+    labels = [": ".join(translated(words) for words in (row.choice, row.option) if words) for row in rows]
     axes.set_yticklabels([plain(_shortened(label, 44)) for label in labels])
     axes.set_ylim(len(rows) - 0.4, -0.6)
     axes.spines["left"].set_visible(False)
     axes.tick_params(axis="y", length=0, pad=9)
     _log_km(axes, "x", *limits)
-    _name(axes, "elastic thickness, km (logarithmic)")
+    _name(axes, tr("elastic thickness, km (logarithmic)"))
     return figure
 
 
@@ -585,7 +599,7 @@ class StrikeRow:
     number: int
     """Its number in the report, from 1."""
     along: float | None
-    """Distance along the guide, m."""
+    """Distance along strike, m."""
     thickness: Estimate
     """m; its value is None where it is not resolved."""
     break_position: float | None
@@ -624,20 +638,20 @@ def strike_figure(rows: Sequence[StrikeRow], te_range: tuple[float, float]) -> A
         else:
             _interval_bar(first, at, row.thickness, limits, True, color=PLATE, linewidth=linewidth)
     _log_km(first, "y", *limits)
-    _name(first, y="elastic thickness, km")
+    _name(first, y=tr("elastic thickness, km"))
     axes = [first]
     if has_break or has_bulge:
         places = figure.add_subplot(grid[1], sharex=first)
         _tidy(places)
         for words, values, style in (
-            ("break", [row.break_position for row in rows], {"color": LOAD, "marker": "s", "linestyle": "--"}),
-            ("bulge", [row.bulge for row in rows], {"color": PLATE, "marker": "^", "linestyle": "-"}),
+            (tr("break"), [row.break_position for row in rows], {"color": LOAD, "marker": "s", "linestyle": "--"}),
+            (tr("bulge"), [row.bulge for row in rows], {"color": PLATE, "marker": "^", "linestyle": "-"}),
         ):
             km = np.array([np.nan if value is None else value / 1e3 for value in values])
             if np.isfinite(km).any():
                 places.plot(x[order], km[order], markersize=5, linewidth=1.0, markeredgecolor=INK, label=words, **style)
         places.legend(loc="best", ncol=2, **{**_LEGEND, "frameon": True}, framealpha=0.85, edgecolor="none")
-        _name(places, y="from line's start, km")
+        _name(places, y=tr("from line's start, km"))
         axes.append(places)
     if has_shear:
         shear = figure.add_subplot(grid[panels - 1], sharex=first)
@@ -651,7 +665,7 @@ def strike_figure(rows: Sequence[StrikeRow], te_range: tuple[float, float]) -> A
                 shear.plot([at, at], sides, color=INK, linewidth=1.4, marker="_", markersize=6)
             shear.plot([at], [value.value / 1e12], marker="o", markerfacecolor="white", markeredgecolor=INK)
         shear.axhline(0.0, color=FAINT, linewidth=0.8)
-        _name(shear, y="end shear, 10¹² N/m")
+        _name(shear, y=tr("end shear, 10¹² N/m"))
         axes.append(shear)
     for each in axes[:-1]:
         each.tick_params(labelbottom=False)
@@ -659,7 +673,7 @@ def strike_figure(rows: Sequence[StrikeRow], te_range: tuple[float, float]) -> A
         from matplotlib.ticker import MaxNLocator
 
         axes[-1].xaxis.set_major_locator(MaxNLocator(integer=True, nbins=16))
-    _name(axes[-1], "distance along the guide, km" if known_along else "number of the transect")
+    _name(axes[-1], tr("distance along strike, km") if known_along else tr("number of the transect"))
     figure.align_ylabels()
     return figure
 
@@ -780,7 +794,7 @@ def _graticule(axes: Any, project: Any, middle: tuple[float, float], low: np.nda
 
 def _degrees(value: float, longitude: bool) -> str:
     value = (value + 180.0) % 360.0 - 180.0 if longitude else value
-    side = ("E" if value > 0 else "W") if longitude else ("N" if value > 0 else "S")
+    side = (tr("E") if value > 0 else tr("W")) if longitude else (tr("N") if value > 0 else tr("S"))
     return f"{abs(value):.4g}°{'' if abs(value) < 1e-9 or abs(value) == 180.0 else side}"
 
 
@@ -796,7 +810,7 @@ def _scale_and_north(figure: Any, axes: Any, low: np.ndarray, high: np.ndarray, 
     margin.set_xlim(0.0, 1.0)
     margin.set_ylim(0.0, 1.0)
     margin.annotate("", (0.5, 0.97), (0.5, 0.80), arrowprops={"arrowstyle": "-|>", "color": INK, "linewidth": 1.4})
-    margin.text(0.5, 0.78, "north", ha="center", va="top", fontsize=_TEXT, color=INK)
+    margin.text(0.5, 0.78, tr("north"), ha="center", va="top", fontsize=_TEXT, color=INK)
     bar = figure.add_axes((box.x1 - wide, 0.03 / total[1], wide, 0.2 / total[1]))
     bar.set_axis_off()
     bar.set_xlim(0.0, 1.0)

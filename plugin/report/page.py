@@ -1,7 +1,8 @@
 """The report as one HTML file without references to anything outside it.
 
-Every text that comes from the user or from data passes through `escaped`. A `Report` takes fitted transects one by one
-and keeps only text and a summary of each, so that thousands of them need little memory.
+Every text that comes from the user or from data passes through `escaped`, and what the report itself says through
+`tr`. A `Report` takes fitted transects one by one and keeps only text and a summary of each, so that thousands of them
+need little memory.
 """
 
 from __future__ import annotations
@@ -19,6 +20,8 @@ import numpy as np
 from ..core.errors import DownwarpError
 from ..core.result import Estimate, FitResult
 from ..core.settings import LOAD_RELIEF, PLATE_NAMES
+from ..core.wording import say
+from ..translation import tr, translated
 from . import figures
 from .words import (
     DASH,
@@ -33,6 +36,7 @@ from .words import (
 
 MOST_FIGURES = 40
 """Transects that get figures and tables of their own; further ones are in the summary and along strike."""
+TITLE = say("Elastic plates along transects")
 
 
 @dataclass(frozen=True)
@@ -43,7 +47,7 @@ class ReportedTransect:
     line: np.ndarray | None = None
     """Longitude and latitude of its vertices, degrees, shape (n, 2); None where stations have no place."""
     along: float | None = None
-    """Distance along the guide at which it was laid, m."""
+    """Distance along strike, m; None where it has none."""
 
 
 @dataclass(frozen=True)
@@ -67,7 +71,7 @@ def write_report(
     failures: Sequence[tuple[str, str]] = (),
     inputs: Mapping[str, str] | None = None,
     versions: Mapping[str, str] | None = None,
-    title: str = "Elastic plates along transects",
+    title: str = TITLE,
     guide: np.ndarray | None = None,
 ) -> None:
     """Write the report of a run; see `Report`. ``failures``: names of transects that gave no fit, each with its reason.
@@ -83,8 +87,8 @@ def write_report(
 
 
 def escaped(text: object) -> str:
-    """Text as HTML shows it literally, in elements and in attributes."""
-    return html.escape(str(text), quote=True)
+    """Text as HTML shows it literally, in elements and in attributes; in the user's language where it was said."""
+    return html.escape(translated(text) if isinstance(text, str) else str(text), quote=True)
 
 
 class Report:
@@ -94,7 +98,7 @@ class Report:
         self,
         inputs: Mapping[str, str],
         versions: Mapping[str, str],
-        title: str = "Elastic plates along transects",
+        title: str = TITLE,
         guide: np.ndarray | None = None,
     ) -> None:
         """``inputs``: every input of the run by its key, ``versions``: of what took part; ``guide``: longitude and
@@ -131,21 +135,25 @@ class Report:
         try:
             handle, part = tempfile.mkstemp(dir=target.parent, prefix=target.name, suffix=".part")
         except OSError as error:
-            raise DownwarpError(f"REPORT cannot be written to {target}: {error.strerror}.") from None
+            raise DownwarpError(
+                "REPORT cannot be written to {target}: {reason}.", target=target, reason=error.strerror
+            ) from None
         try:
             with os.fdopen(handle, "w", encoding="utf-8") as stream:
                 stream.write(self.page())
             os.chmod(part, 0o644)  # a temporary file is its owner's alone
             os.replace(part, target)
         except OSError as error:
-            raise DownwarpError(f"REPORT cannot be written to {target}: {error.strerror}.") from None
+            raise DownwarpError(
+                "REPORT cannot be written to {target}: {reason}.", target=target, reason=error.strerror
+            ) from None
         finally:
             if os.path.exists(part):
                 os.remove(part)
 
     def page(self) -> str:
         """The whole page."""
-        return self.document((self._answers(), self._overview(), *self._sections, _METHOD, _CAUTIONS))
+        return self.document((self._answers(), self._overview(), *self._sections, _method(), _cautions()))
 
     def document(self, sections: Iterable[str]) -> str:
         """A page of sections, with what it takes to repeat the run."""
@@ -155,17 +163,18 @@ class Report:
         inputs = [(escaped(key), escaped(value)) for key, value in self._inputs.items()]
         versions = [(escaped(key), escaped(value)) for key, value in self._versions.items()]
         parts = [
-            '<!DOCTYPE html>\n<html lang="en">\n<head>\n<meta charset="utf-8">',
+            # A translation puts its own language here.
+            f'<!DOCTYPE html>\n<html lang="{escaped(tr("en"))}">\n<head>\n<meta charset="utf-8">',
             f'<title>{title}</title>\n<meta name="viewport" content="width=device-width, initial-scale=1">',
             f"<style>{_STYLE}</style>\n</head>\n<body>",
-            f"<header><p>Downwarp report</p><h1>{title}</h1></header>",
+            f"<header><p>{tr('Downwarp report')}</p><h1>{title}</h1></header>",
             f'<svg class="letters" aria-hidden="true"><defs>{letters}</defs></svg>' if letters else "",
             "<main>",
             f'<p class="note">{escaped(self._missing)}</p>' if self._missing else "",
             *sections,
-            "<section><h2>To repeat this run</h2>",
-            _table(("input", "value"), inputs, "Inputs", free=1),
-            _table(("software", "version"), versions, "Versions"),
+            f"<section><h2>{tr('To repeat this run')}</h2>",
+            _table((tr("input"), tr("value")), inputs, tr("Inputs"), free=1),
+            _table((tr("software"), tr("version")), versions, tr("Versions")),
             "</section></main></body></html>\n",
         ]
         return "\n".join(part for part in parts if part)
@@ -183,7 +192,7 @@ class Report:
 
     def _answers(self) -> str:
         """The headlines, as long as they are few, else how many there are of which kind; and what failed."""
-        parts = ["<section><h2>Answer</h2>"]
+        parts = [f"<section><h2>{tr('Answer')}</h2>"]
         several = len(self._summaries) > 1
         if several:
             parts.append(f"<p>{escaped(_overall(self._summaries, len(self._failures)))}</p>")
@@ -194,36 +203,42 @@ class Report:
             )
             parts.append(f'<ol class="answers">{items}</ol>')
         if not self._summaries:
-            parts.append("<p>No transect could be fitted.</p>")
+            parts.append(f"<p>{tr('No transect could be fitted.')}</p>")
         if self._failures:
             rows = [(escaped(name), escaped(reason)) for name, reason in self._failures]
-            parts.append(_table(("transect", "why it gave no fit"), rows, "Not fitted", free=0))
+            parts.append(_table((tr("transect"), tr("why it gave no fit")), rows, tr("Not fitted"), free=0))
         return "\n".join([*parts, "</section>"])
 
     def _overview(self) -> str:
         """Map, summary table and figure along strike."""
-        dashed = ", dashed the guide" if self._guide is not None else ""
+        dashed = tr(", dashed the guide") if self._guide is not None else ""
         sketch = self._figure(
             lambda: figures.map_figure(self._lines, self._guide),
-            "Where the transects lie: numbers as in this report, dots at the lines' starts"
-            f"{dashed}. North is up in the middle of the sketch; equal scale in all directions.",
-            f"Map sketch of {len(self._lines)} transects",
+            tr(
+                "Where the transects lie: numbers as in this report, dots at the lines' starts{dashed}. "
+                "North is up in the middle of the sketch; equal scale in all directions.",
+                dashed=dashed,
+            ),
+            tr("Map sketch of {count} transects", count=len(self._lines)),
         )
-        parts = [f"<section><h2>Where</h2>{sketch}</section>"] if sketch else []
+        parts = [f"<section><h2>{tr('Where')}</h2>{sketch}</section>"] if sketch else []
         if len(self._summaries) > 1:
             strike = self._figure(
                 lambda: figures.strike_figure([each.strike for each in self._summaries], self._te_range or (1e3, 1e5)),
-                "Elastic thickness with its interval (an arrow: the data leave that side open; a cross at the bottom: "
-                "not resolved), break and bulge, and end shear with its interval, from transect to transect.",
-                "Elastic thickness and plate geometry from transect to transect",
+                tr(
+                    "Elastic thickness with its interval (an arrow: the data leave that side open; a cross at the "
+                    "bottom: not resolved), break and bulge, and end shear with its interval, from transect to transect."
+                ),
+                tr("Elastic thickness and plate geometry from transect to transect"),
             )
-            parts.append(f"<section><h2>From transect to transect</h2>{strike}{self._summary_table()}</section>")
+            heading = tr("From transect to transect")
+            parts.append(f"<section><h2>{heading}</h2>{strike}{self._summary_table()}</section>")
         return "\n".join(parts)
 
     def _summary_table(self) -> str:
         head = (
-            "no.", "transect", "plate", "Te, km", "interval, km", "E, GPa", "break, km", "deepest, m", "bulge, km",
-            "end shear, N/m", "rms, m",
+            tr("no."), tr("transect"), tr("plate"), tr("Te, km"), tr("interval, km"), tr("E, GPa"), tr("break, km"),
+            tr("deepest, m"), tr("bulge, km"), tr("end shear, N/m"), tr("rms, m"),
         )  # fmt: skip
         rows = []
         for each in self._summaries:
@@ -232,12 +247,12 @@ class Report:
             resolved = each.thickness.value is not None
             rows.append((
                 str(strike.number), name, escaped(each.kind),
-                number(each.thickness.value / 1e3) if each.thickness.value is not None else "not resolved",
+                number(each.thickness.value / 1e3) if each.thickness.value is not None else tr("not resolved"),
                 escaped(interval_words(each.thickness, "", 1e3)) if resolved else DASH,
                 stated(each.young / 1e9), _km(strike.break_position), number(each.deepest), _km(strike.bulge),
                 number(strike.end_shear.value), number(each.rms),
             ))  # fmt: skip
-        return _table(head, rows, "All transects", numeric_from=3, free=1)
+        return _table(head, rows, tr("All transects"), numeric_from=3, free=1)
 
     def _section(self, place: int, result: FitResult) -> str:
         """One transect."""
@@ -253,29 +268,36 @@ class Report:
             f'<ul class="remarks">{said}</ul>' if said else "",
             self._figure(
                 lambda: _profile(result),
-                "The transect: "
-                + ("relief with the load hatched, " if shows_load else "")
-                + "observed surface with the fitted stations filled, predicted surface with its pointwise band, and "
-                "below it observed less predicted.",
-                f"Profile of the transect, {headline(result)}",
+                tr(
+                    "The transect: {load}observed surface with the fitted stations filled, predicted surface with its "
+                    "pointwise band, and below it observed less predicted.",
+                    load=tr("relief with the load hatched, ") if shows_load else "",
+                ),
+                tr("Profile of the transect, {answer}", answer=headline(result)),
             ),
             self._figure(
                 lambda: figures.posterior_figure(result),
-                "Posterior density of the elastic thickness (in its logarithm), integrated over the noise and, where "
-                "it was searched, the break.",
-                "Posterior density of the elastic thickness",
+                tr(
+                    "Posterior density of the elastic thickness (in its logarithm), integrated over the noise and, "
+                    "where it was searched, the break."
+                ),
+                tr("Posterior density of the elastic thickness"),
             ),
             self._figure(
                 lambda: figures.misfit_figure(fit),
-                "Misfit over elastic thickness and break; darker is worse. Contours: relative likelihood. A long "
-                "valley means that the data trade one for the other.",
-                "Misfit over elastic thickness and break",
+                tr(
+                    "Misfit over elastic thickness and break; darker is worse. Contours: relative likelihood. A long "
+                    "valley means that the data trade one for the other."
+                ),
+                tr("Misfit over elastic thickness and break"),
             ),
             self._figure(
                 lambda: figures.choices_figure(result),
-                "How the answer moves with each reasonable choice. Dotted band: the interval of the answer; an arrow: "
-                "open on that side. Where bars leave the band, the choice matters more than the noise.",
-                "Elastic thickness under other reasonable choices",
+                tr(
+                    "How the answer moves with each reasonable choice. Dotted band: the interval of the answer; an "
+                    "arrow: open on that side. Where bars leave the band, the choice matters more than the noise."
+                ),
+                tr("Elastic thickness under other reasonable choices"),
             ),
             _places(result),
             _parameters(result),
@@ -300,7 +322,7 @@ def _summary(place: int, transect: ReportedTransect, detailed: bool) -> _Summary
     return _Summary(
         problem.profile.name,
         headline(transect.result),
-        PLATE_NAMES[fit.kind],
+        translated(PLATE_NAMES[fit.kind]),
         thickness,
         fit.rms,
         problem.options.elastic.young,
@@ -314,16 +336,22 @@ def _overall(summaries: Sequence[_Summary], failed: int) -> str:
     """How many transects gave which kind of answer, in words."""
     values = [each.thickness.value / 1e3 for each in summaries if each.thickness.value is not None]
     total = len(summaries) + failed
-    text = f"Of {total} transects, {len(values)} {'resolves' if len(values) == 1 else 'resolve'} the elastic thickness"
-    if len(values) > 1:
-        low, middle, high = np.quantile(values, [0.0, 0.5, 1.0])
-        text += f": from {number(low)} to {number(high)} km, median {number(middle)} km"
+    count = len(values)
+    if count == 1:
+        text = tr("Of {total} transects, {count} resolves the elastic thickness", total=total, count=count)
+    else:
+        text = tr("Of {total} transects, {count} resolve the elastic thickness", total=total, count=count)
+    if count > 1:
+        low, middle, high = (number(side) for side in np.quantile(values, [0.0, 0.5, 1.0]))
+        text += tr(": from {low} to {high} km, median {middle} km", low=low, high=high, middle=middle)
     rest = []
-    if len(summaries) > len(values):
-        count = len(summaries) - len(values)
-        rest.append(f"{count} {'was' if count == 1 else 'were'} fitted without resolving it")
+    open_ones = len(summaries) - count
+    if open_ones == 1:
+        rest.append(tr("{count} was fitted without resolving it", count=open_ones))
+    elif open_ones:
+        rest.append(tr("{count} were fitted without resolving it", count=open_ones))
     if failed:
-        rest.append(f"{failed} could not be fitted")
+        rest.append(tr("{count} could not be fitted", count=failed))
     return text + "".join(f"; {each}" for each in rest) + "."
 
 
@@ -362,8 +390,8 @@ def _places(result: FitResult) -> str:
         (figures.place_words(kind, deflection), _km(distance), number(deflection))
         for kind, (distance, deflection) in figures.marked_places(result.best.bent).items()
     ]
-    head = ("place", "distance from the line's start, km", "deflection, m, positive down")
-    return _table(head, rows, "Places that matter", numeric_from=1)
+    head = (tr("place"), tr("distance from the line's start, km"), tr("deflection, m, positive down"))
+    return _table(head, rows, tr("Places that matter"), numeric_from=1)
 
 
 def _parameters(result: FitResult) -> str:
@@ -374,8 +402,8 @@ def _parameters(result: FitResult) -> str:
         if each.low is not None or each.high is not None:
             interval = interval_words(Estimate(None, each.low, each.high), "", 1.0)
         rows.append(tuple(escaped(cell) for cell in (name, value, interval, unit_words(each.unit), each.origin)))
-    head = ("value of", "value", "interval", "unit", "origin")
-    return _table(head, rows, "Every value in use, and where it came from")
+    head = (tr("value of"), tr("value"), tr("interval"), tr("unit"), tr("origin"))
+    return _table(head, rows, tr("Every value in use, and where it came from"))
 
 
 def _choices(result: FitResult) -> str:
@@ -386,53 +414,68 @@ def _choices(result: FitResult) -> str:
         resolved = thickness.value is not None and not open_both
         rows.append((
             escaped(row.choice), escaped(row.option),
-            number(thickness.value / 1e3) if resolved and thickness.value is not None else "not resolved",
+            number(thickness.value / 1e3) if resolved and thickness.value is not None else tr("not resolved"),
             escaped(interval_words(thickness, "", 1e3)) if resolved else DASH, number(row.rms),
         ))  # fmt: skip
-    head = ("choice", "option", "Te, km", "interval, km", "rms, m")
-    return _table(head, rows, "The answer under other choices", numeric_from=2)
+    head = (tr("choice"), tr("option"), tr("Te, km"), tr("interval, km"), tr("rms, m"))
+    return _table(head, rows, tr("The answer under other choices"), numeric_from=2)
 
 
-_METHOD = """<section><h2>Method</h2>
-<p>The lithosphere is taken as a thin elastic plate that floats on a fluid mantle and bends in one direction only,
+_METHOD = (
+    say("""The lithosphere is taken as a thin elastic plate that floats on a fluid mantle and bends in one direction only,
 along the transect. With distance <i>x</i> along the line and deflection <i>w</i> (positive down), the load <i>q</i>
 is carried by the plate's stiffness, by any in-plane force <i>P</i> (compression positive), and by the buoyancy of
-what is displaced:</p>
-<p class="equation">(<i>D w</i>&Prime;)&Prime; + (<i>P w</i>&prime;)&prime; + <i>k w</i> = <i>q</i></p>
-<p class="equation"><i>D</i> = <i>E T</i><sub>e</sub><sup>3</sup> / [12 (1 &minus; <i>&nu;</i><sup>2</sup>)],&emsp;
-<i>k</i> = (<i>&rho;</i><sub>mantle</sub> &minus; <i>&rho;</i><sub>infill</sub>) <i>g</i>,&emsp;
-<i>&alpha;</i> = (4 <i>D</i> / <i>k</i>)<sup>1/4</sup></p>
-<p><i>T</i><sub>e</sub> is the elastic thickness, <i>D</i> the flexural rigidity and <i>&alpha;</i> the flexural
+what is displaced:"""),
+    say("""<i>T</i><sub>e</sub> is the elastic thickness, <i>D</i> the flexural rigidity and <i>&alpha;</i> the flexural
 parameter, the length over which the plate bends. At a break the plate ends free, but for an end shear (positive down)
 and an end moment (positive where it turns the end down); everywhere else it runs on beyond the line. The equation is
-solved with cubic Hermite elements, which give moment and shear in equilibrium with the load.</p>
-<p>The predicted surface is a regional surface (level, tilt, bow, as chosen) less the deflection. For each trial
+solved with cubic Hermite elements, which give moment and shear in equilibrium with the load."""),
+    say("""The predicted surface is a regional surface (level, tilt, bow, as chosen) less the deflection. For each trial
 thickness, and break where it is searched, the end forces and the regional follow by least squares, and their
 uncertainty is integrated out. Neighbouring residuals resemble one another; the likelihood averages over how far and
 how strongly, so that many stations close together do not count as many independent readings. The interval is the one
 of highest posterior density in the logarithm of the thickness; where the data leave a side open, it is reported open
-and not closed at the search limit.</p>
-</section>"""
+and not closed at the search limit."""),
+)
+"""Paragraphs, as HTML."""
 
-_CAUTIONS = """<section><h2>Assumptions and cautions</h2>
-<ul>
-<li><b>A strip.</b> Load and plate are taken to run on unchanged across the transect. A round load bends the plate
+_EQUATIONS = """<p class="equation">(<i>D w</i>&Prime;)&Prime; + (<i>P w</i>&prime;)&prime; + <i>k w</i> = <i>q</i></p>
+<p class="equation"><i>D</i> = <i>E T</i><sub>e</sub><sup>3</sup> / [12 (1 &minus; <i>&nu;</i><sup>2</sup>)],&emsp;
+<i>k</i> = (<i>&rho;</i><sub>mantle</sub> &minus; <i>&rho;</i><sub>infill</sub>) <i>g</i>,&emsp;
+<i>&alpha;</i> = (4 <i>D</i> / <i>k</i>)<sup>1/4</sup></p>"""
+"""They stand after the first paragraph."""
+
+_CAUTIONS = (
+    say("""<b>A strip.</b> Load and plate are taken to run on unchanged across the transect. A round load bends the plate
 less and in another shape: a strip misplaces its bulge and makes it too high. Transects oblique to the structure
-stretch its widths and make the plate seem thicker.</li>
-<li><b>Elastic, and steady.</b> No creep, no yielding, no faulting, no history of the load and no heat: the thickness
-found is that of the elastic plate which bends alike, not a layer that can be drilled into.</li>
-<li><b>One thickness.</b> The plate is uniform along each transect. Where it is weakened, as near a trench axis, the
-result is some average of what is there.</li>
-<li><b>Constants.</b> The thickness holds for the elastic constants and densities printed beside it. Twice the Young's
+stretch its widths and make the plate seem thicker."""),
+    say("""<b>Elastic, and steady.</b> No creep, no yielding, no faulting, no history of the load and no heat: the thickness
+found is that of the elastic plate which bends alike, not a layer that can be drilled into."""),
+    say("""<b>One thickness.</b> The plate is uniform along each transect. Where it is weakened, as near a trench axis, the
+result is some average of what is there."""),
+    say("""<b>Constants.</b> The thickness holds for the elastic constants and densities printed beside it. Twice the Young's
 modulus gives a thickness lower by a fifth; a wrong density of the load or the infill moves it too, as the choices
-show.</li>
-<li><b>Choices.</b> Window, regional, infill and kind of plate may move the answer by more than its interval; the
-choices table, where it was made, shows by how much.</li>
-<li><b>Other sources of relief.</b> Swells, sediments, erosion, crustal thickness and dynamic support look like
-deflection where they are not modelled.</li>
-<li><b>Use.</b> This is a scientific estimate. It is no basis for drilling, navigation, siting or engineering: those
-need licensed practice and the local codes.</li>
-</ul></section>"""
+show."""),
+    say("""<b>Choices.</b> Window, regional, infill and kind of plate may move the answer by more than its interval; the
+choices table, where it was made, shows by how much."""),
+    say("""<b>Other sources of relief.</b> Swells, sediments, erosion, crustal thickness and dynamic support look like
+deflection where they are not modelled."""),
+    say("""<b>Use.</b> This is a scientific estimate. It is no basis for drilling, navigation, siting or engineering: those
+need licensed practice and the local codes."""),
+)
+"""Items, as HTML."""
+
+
+def _method() -> str:
+    first, *others = (f"<p>{translated(paragraph)}</p>" for paragraph in _METHOD)
+    return "\n".join([f"<section><h2>{tr('Method')}</h2>", first, _EQUATIONS, *others, "</section>"])
+
+
+def _cautions() -> str:
+    items = [f"<li>{translated(item)}</li>" for item in _CAUTIONS]
+    heading = tr("Assumptions and cautions")
+    return "\n".join([f"<section><h2>{heading}</h2>", "<ul>", *items, "</ul></section>"])
+
 
 _STYLE = """
 :root{--ink:#26343a;--plate:#1f6f84;--load:#e08a2e;--pale:#eef4f5;--line:#c9d4d8}

@@ -1,4 +1,7 @@
-"""Numbers, names and sentences of the report, as plain text (escaped only where a page is made of them)."""
+"""Numbers, names and sentences of the report, as plain text (escaped only where a page is made of them).
+
+What functions return is in the user's language; texts in constants are translated where they are used.
+"""
 
 from __future__ import annotations
 
@@ -7,35 +10,45 @@ import math
 from ..core.choices import REGIONAL_WORDS
 from ..core.result import Estimate, Fit, FitResult, Parameter
 from ..core.settings import FROM_SETTING, GIVEN, PLATE_NAMES, SETTINGS
+from ..core.wording import say
+from ..translation import tr, translated
 
 OPTION_WORDS = {
     "SETTING": tuple(setting.name for setting in SETTINGS),
-    "PLATE": ("continuous", "broken", "both compared"),
-    "BREAK_AT": ("at the line's start", "at the lowest station", "at a stated distance", "searched"),
-    "LOAD": ("relief above the reference level", "DEM holds load thickness", "no relief load"),
-    "END_FORCES": ("none", "shear", "moment", "shear and moment"),
+    "PLATE": (*PLATE_NAMES, say("both compared")),
+    "BREAK_AT": (
+        say("at the line's start"),
+        say("at the lowest station"),
+        say("at a stated distance"),
+        say("searched"),
+    ),
+    "LOAD": (say("relief above the reference level"), say("DEM holds load thickness"), say("no relief load")),
+    "END_FORCES": (say("none"), say("shear"), say("moment"), say("shear and moment")),
     "REGIONAL": REGIONAL_WORDS,
-    "ROBUST": ("no", "yes"),
-    "FILL_SINKING_ONLY": ("no", "yes"),
+    "ROBUST": (say("no"), say("yes")),
+    "FILL_SINKING_ONLY": (say("no"), say("yes")),
 }
 """What the numbers of enumerated options mean, in the order of their keys."""
 
 PARAMETER_WORDS = {
-    "te": "elastic thickness",
-    "rigidity": "flexural rigidity",
-    "flexural_parameter": "flexural parameter",
-    "break": "break, from the line's start",
-    "end_shear": "end shear, positive down",
-    "end_moment": "end moment, positive turning the end down",
-    "regional_level": "regional level at the line's start",
-    "regional_tilt": "regional tilt",
-    "regional_bow": "regional bow",
-    "residual_size": "size of the residuals",
-    "residual_correlation_length": "correlation length of the residuals",
-    "residual_white_share": "uncorrelated share of their variance",
-    "log_odds_of_bending": "ln odds, bent plate against regional alone",
-    "log_odds_of_plate": "ln odds between the kinds of plate",
-    "rms": "root mean square residual",
+    "te": say("elastic thickness"),
+    "rigidity": say("flexural rigidity"),
+    "flexural_parameter": say("flexural parameter"),
+    "break": say("break, from the line's start"),
+    "end_shear": say("end shear, positive down"),
+    "end_moment": say("end moment, positive turning the end down"),
+    "regional_level": say("regional level at the line's start"),
+    "regional_tilt": say("regional tilt"),
+    "regional_bow": say("regional bow"),
+    "residual_size": say("size of the residuals"),
+    "residual_correlation_length": say("correlation length of the residuals"),
+    "residual_white_share": say("uncorrelated share of their variance"),
+    "log_odds_of_bending": say("ln odds, bent plate against regional alone"),
+    "log_odds_of_continuous_plate": say("ln odds, continuous plate against broken"),
+    "te_near": say("elastic thickness nearer to the break"),
+    "zone_change": say("change of thickness, from the break"),
+    "log_odds_of_two_zones": say("ln odds, two zones against one"),
+    "rms": say("root mean square residual"),
 }
 """What fitted parameters are called; a parameter that has no entry keeps its name."""
 
@@ -98,9 +111,9 @@ def unit_words(unit: str) -> str:
 def parameter_words(parameter: Parameter) -> tuple[str, str]:
     """Name and value of a parameter as people say them."""
     options = OPTION_WORDS.get(parameter.name)
-    name = PARAMETER_WORDS.get(parameter.name, parameter.name)
+    name = translated(PARAMETER_WORDS.get(parameter.name, parameter.name))
     if options is not None and parameter.value is not None and 0 <= int(parameter.value) < len(options):
-        return name, options[int(parameter.value)]
+        return name, translated(options[int(parameter.value)])
     if parameter.value is not None and parameter.origin in (GIVEN, FROM_SETTING):
         return name, stated(parameter.value)
     return name, number(parameter.value)
@@ -115,14 +128,15 @@ def is_resolved(fit: Fit) -> bool:
 def interval_words(estimate: Estimate, unit: str, scale: float, digits: int = 3) -> str:
     """The interval of an estimate, divided by ``scale``, in words; an open side is said to be open."""
     low, high = (None if side is None else number(side / scale, digits) for side in (estimate.low, estimate.high))
-    space = f" {unit}" if unit else ""
+    # The unit comes with its space, for it may be missing.
+    unit = f" {unit}" if unit else ""
     if low is not None and high is not None:
-        return f"{low} to {high}{space}"
+        return tr("{low} to {high}{unit}", low=low, high=high, unit=unit)
     if low is not None:
-        return f"from {low}{space}, open above"
+        return tr("from {low}{unit}, open above", low=low, unit=unit)
     if high is not None:
-        return f"up to {high}{space}, open below"
-    return "open on both sides"
+        return tr("up to {high}{unit}, open below", high=high, unit=unit)
+    return tr("open on both sides")
 
 
 def headline(result: FitResult) -> str:
@@ -131,13 +145,26 @@ def headline(result: FitResult) -> str:
     options = fit.bent.problem.options
     elastic, rho = options.elastic, fit.bent.problem.densities
     confidence = f"{stated(options.confidence * 100)} %"
-    given = (
-        f"E = {stated(elastic.young / 1e9)} GPa, Poisson's ratio {stated(elastic.poisson)} and densities of "
-        f"{stated(rho.mantle)} (mantle) and {stated(rho.infill)} kg/m³ (infill)"
+    given = tr(
+        "E = {young} GPa, Poisson's ratio {poisson} and densities of {mantle} (mantle) and {infill} kg/m³ (infill)",
+        young=stated(elastic.young / 1e9),
+        poisson=stated(elastic.poisson),
+        mantle=stated(rho.mantle),
+        infill=stated(rho.infill),
     )
     kind = PLATE_NAMES[fit.kind]
     thickness = fit.thickness
     if thickness.value is None or not is_resolved(fit):
-        return f"Elastic thickness is not resolved: these data do not bound that of a {kind} plate at {given}."
-    value, interval = number(thickness.value / 1e3), interval_words(thickness, "km", 1e3)
-    return f"Elastic thickness {value} km ({confidence} interval {interval}) of a {kind} plate, at {given}."
+        return tr(
+            "Elastic thickness is not resolved: these data do not bound that of a {kind} plate at {given}.",
+            kind=kind,
+            given=given,
+        )
+    return tr(
+        "Elastic thickness {value} km ({confidence} interval {interval}) of a {kind} plate, at {given}.",
+        value=number(thickness.value / 1e3),
+        confidence=confidence,
+        interval=interval_words(thickness, "km", 1e3),
+        kind=kind,
+        given=given,
+    )

@@ -257,6 +257,7 @@ def test_the_demo_refuses_bad_noise_and_seeds(tmp_path):
     folder = str(tmp_path / "demo")
     for changes, words in (
         ({"NOISE_M": -1}, "NOISE_M is -1; it takes a number from 0 to 1000"),
+        ({"NOISE_MGAL": 2000}, "NOISE_MGAL is 2000; it takes a number from 0 to 1000"),
         ({"SEED": -1}, "SEED is -1; it takes a whole number from 0"),
         ({"NOISE_M": "loud"}, "NOISE_M is 'loud'; it takes a number"),
     ):

@@ -107,7 +107,9 @@ STATION_FIELDS = {
     "SIGMA_FIELD": ("field", "sigma_m"),
     "TRANSECT_FIELD": ("field", "transect"),
 }
-FIT_SINKS = dict.fromkeys(("PROFILES", "STATIONS", "MARKERS", "PARAMETERS", "MISFIT", "CHOICES"), ("sink", None))
+FIT_SINKS = dict.fromkeys(
+    ("PROFILES", "STATIONS", "MARKERS", "PARAMETERS", "MISFIT", "CHOICES", "ALONG_STRIKE"), ("sink", None)
+)
 FIT = {**SEARCH, **BREAK, **LOAD, **INSIDE, **DENSITIES, **CONSTANTS, **WINDOW, **WEIGHTS, **SETTING, **FIT_SINKS}
 REPORT = {"REPORT": ("fileDestination", None)}
 
@@ -170,6 +172,10 @@ OUTPUT_FIELDS = {
     "PARAMETERS": "transect, plate, parameter, value, low, high, unit, origin",
     "MISFIT": "transect, plate, te_km, break_km, rms_m, relative_likelihood",
     "CHOICES": "transect, choice, option, te_km, te_low_km, te_high_km, rms_m",
+    "ALONG_STRIKE": "transect, along_strike_km, place_km, setting, plate, te_km, te_low_km, te_high_km, break_km, "
+    "break_low_km, break_high_km, deepest_m, deepest_km, node_km, bulge_m, bulge_km, end_shear_n_per_m, "
+    "end_shear_low_n_per_m, end_shear_high_n_per_m, end_moment_n, end_moment_low_n, end_moment_high_n, rms_m, "
+    "young_gpa, poisson, gravity_m_s2, rho_mantle, rho_infill, rho_load",
 }
 TEXT = {
     "transect", "setting", "plate", "kind", "parameter", "unit", "origin", "choice", "option", "remarks",
@@ -241,6 +247,7 @@ def test_geometries_of_the_outputs():
     types = QgsWkbTypes.Type
     assert GEOMETRY["STATIONS"] == GEOMETRY["MARKERS"] == types.PointZ
     assert GEOMETRY["PROFILES"] == types.LineStringZM
+    assert GEOMETRY["ALONG_STRIKE"] == types.Point
     assert not {"PARAMETERS", "MISFIT", "CHOICES"} & set(GEOMETRY)
 
 

@@ -210,17 +210,19 @@ def test_many_lines_by_workers_are_the_lines_alone(ground):
 
 
 def test_the_demo_says_how_to_fit_it(tmp_path):
-    """demo.json: scenarios with true thicknesses and keys of fittransects whose files are there."""
-    from downwarp_checkout.plugin.provider import FitTransects
+    """demo.json: scenarios with true thicknesses and keys of fittransects and gravitytransects whose files are there."""
+    from downwarp_checkout.plugin.provider import FitTransects, GravityTransects
 
-    run("demolayers", {"OUTPUT_FOLDER": str(tmp_path), "NOISE_M": 20, "SEED": 3}, sinks=())
+    run("demolayers", {"OUTPUT_FOLDER": str(tmp_path), "NOISE_M": 20, "NOISE_MGAL": 2, "SEED": 3}, sinks=())
     content = json.loads((tmp_path / "demo.json").read_text(encoding="utf-8"))
-    assert (content["noise_m"], content["seed"]) == (20, 3)
+    assert (content["noise_m"], content["noise_mgal"], content["seed"]) == (20, pytest.approx(2), 3)
     known = {key.name for key in FitTransects.keys}
     assert [scenario["true_te_km"] for scenario in content["scenarios"]] == [24, 34, 18]
     for scenario in content["scenarios"]:
         assert set(scenario["parameters"]) <= known
         assert (tmp_path / scenario["parameters"]["TRANSECTS"]).is_file()
         assert (tmp_path / scenario["parameters"]["DEM"]).is_file()
+        assert set(scenario["gravity"]) <= {key.name for key in GravityTransects.keys}
+        assert (tmp_path / scenario["gravity"]["ANOMALY"]).is_file()
         table = rows(str(tmp_path / scenario["parameters"]["TRANSECTS"]))
         assert [row["name"] for row in table] == [f"{scenario['name']} {number}" for number in (1, 2, 3)]

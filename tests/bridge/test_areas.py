@@ -29,6 +29,14 @@ def test_polygons_count_together_and_holes_do_not():
     np.testing.assert_array_equal(inside, [True, False, True, True, False, False])
 
 
+def test_share_of_legs():
+    """A square from 1 to 2.25 degrees along legs of 1 degree: none, all, a quarter; the same across the antimeridian."""
+    made = areas("Polygon ((1 -1, 2.25 -1, 2.25 1, 1 1, 1 -1))")
+    np.testing.assert_allclose(made.share(np.arange(5.0), np.zeros(5)), [0.0, 1.0, 0.25, 0.0])
+    made = areas("Polygon ((179.5 -1, 181 -1, 181 1, 179.5 1, 179.5 -1))")
+    np.testing.assert_allclose(made.share(np.array([178.0, 179.0, -180.0, -179.0]), np.zeros(4)), [0.0, 0.5, 1.0])
+
+
 def test_shapes_are_kept():
     """A swath's places, (strips, stations)."""
     places = np.full((3, 5), 1.0)

@@ -1,5 +1,6 @@
 """Rasters sampled through QGIS, against GDAL's own arrays, scipy's interpolators and identities."""
 
+from functools import partial
 from pathlib import Path
 
 import numpy as np
@@ -7,6 +8,7 @@ import pytest
 from downwarp_checkout.plugin.bridge import rasters
 from downwarp_checkout.plugin.bridge.frames import Frame
 from downwarp_checkout.plugin.bridge.rasters import RasterReader
+from downwarp_checkout.plugin.bridge.tiles import MOST_BYTES, SIDE_BITS, Tiles
 from downwarp_checkout.plugin.core.errors import Cancelled, DownwarpError
 from downwarp_checkout.plugin.core.transect import Transect
 from pyproj import Geod, Transformer
@@ -75,11 +77,11 @@ def test_agrees_with_scipy_between_cell_centres(tmp_path, frame):
     np.testing.assert_allclose(reader.sample(longitude, latitude), expected, rtol=0, atol=1e-8)
 
 
-@pytest.mark.parametrize("tile", [1, 7, 64, 256])
+@pytest.mark.parametrize("bits", [0, 3, 6, 8])
 @pytest.mark.parametrize(("left", "width"), [(-0.041667052558463, 0.083334105116925), (1 / 3, 1 / 7), (-17.3, 0.1)])
-def test_windows_are_the_cells_asked_for(tmp_path, frame, monkeypatch, tile, left, width):
+def test_windows_are_the_cells_asked_for(tmp_path, frame, monkeypatch, bits, left, width):
     """Every cell numbered and asked for at its centre, with cell sizes that binary fractions cannot hold."""
-    monkeypatch.setattr(rasters, "_TILE", tile)
+    monkeypatch.setattr(rasters, "Tiles", partial(Tiles, side_bits=bits))
     numbers = np.arange(61 * 83, dtype=float).reshape(61, 83)
     reader = RasterReader(write(tmp_path / "a.tif", numbers, left, 30.0, width), 1, frame)
     longitude = left + width * (np.arange(83) + 0.5)
@@ -257,13 +259,26 @@ def test_a_rotated_raster_is_read_as_qgis_shows_it(tmp_path, frame):
 
 
 def test_a_global_line_over_a_huge_raster_reads_few_cells(tmp_path, frame, monkeypatch):
-    """1.8e9 cells: a 20,000 km line reads windows of at most 65,536 cells, none twice, under a hundredth of all."""
+    """1.8e9 cells: a 20,000 km line reads tiles of 128 by 128 cells, none twice, under a hundredth of all."""
     path = str(tmp_path / "a.tif")
     options = ["SPARSE_OK=TRUE", "TILED=YES"]
     source = gdal.GetDriverByName("GTiff").Create(path, 60_000, 30_000, 1, gdal.GDT_Byte, options)
     source.SetGeoTransform((-180, 0.006, 0, 90, 0, -0.006))
     source.SetProjection(QgsCoordinateReferenceSystem(DEGREES).toWkt())
     del source
+    windows = watched_reads(monkeypatch)
+    stations = Transect("A", [[10.0, -60.0], [-170.5, 61.0]], Geod(ellps="WGS84")).stations(1e3)
+    assert stations.distance.size > 19_000
+    result = RasterReader(QgsRasterLayer(path, "huge"), 1, frame).sample(stations.longitude, stations.latitude)
+    assert (result == 0.0).all()
+    cells = [rows * columns for _, _, rows, columns in windows]
+    assert max(cells) == 128 * 128
+    assert sum(cells) < 1.8e7
+    assert len(set(windows)) == len(windows)
+
+
+def watched_reads(monkeypatch):
+    """Windows that readers made from now on ask their provider for, as (top, left, rows, columns)."""
     windows = []
     read = RasterReader._read
 
@@ -272,15 +287,72 @@ def test_a_global_line_over_a_huge_raster_reads_few_cells(tmp_path, frame, monke
         return read(self, *window)
 
     monkeypatch.setattr(RasterReader, "_read", watched)
-    stations = Transect("A", [[10.0, -60.0], [-170.5, 61.0]], Geod(ellps="WGS84")).stations(1e3)
-    assert stations.distance.size > 19_000
-    result = RasterReader(QgsRasterLayer(path, "huge"), 1, frame).sample(stations.longitude, stations.latitude)
-    assert (result == 0.0).all()
-    cells = [rows * columns for _, _, rows, columns in windows]
-    assert max(cells) <= 65_536
-    assert sum(cells) < 1.8e7
-    tiles = {(top // 256, left // 256) for top, left, _, _ in windows}
-    assert len(tiles) == len(windows)
+    return windows
+
+
+def test_neighbouring_lines_share_what_is_read(tmp_path, frame, monkeypatch):
+    """40 parallel lines 10 km apart with swaths of 5 lines over 20 km, twice: every tile that they touch is read once,
+    so that no cell is read twice, and values are those of lines read alone, to the last bit."""
+    layer = global_grid(tmp_path / "a.tif", 0.05, step=0.1)
+    windows = watched_reads(monkeypatch)
+    reader = RasterReader(layer, 1, frame)
+    lines = [Transect(str(at), [[10.0, at], [14.5, at + 1.0]], Geod(ellps="WGS84")) for at in 45 + 0.09 * np.arange(40)]
+    places = [line.offset(line.stations(5e3), np.linspace(-8e3, 8e3, 5)) for line in lines]
+    together = [reader.sample(*place) for place in places]
+    cells = sum(rows * columns for _, _, rows, columns in windows)
+    seen = set(windows)
+    assert len(seen) == len(windows)
+    again = [reader.sample(*place) for place in places]
+    assert set(windows) == seen
+    assert sum(rows * columns for _, _, rows, columns in windows) == cells
+    longitude, latitude = (np.concatenate([place[part].ravel() for place in places]) for part in (0, 1))
+    rows, columns = np.floor((90 - latitude) / 0.1 - 0.5), np.floor((longitude - 0.0) / 0.1 - 0.5)
+    side = 1 << SIDE_BITS
+    touched = {
+        (int(row + down) // side, int(column + right) // side)
+        for row, column in zip(rows, columns)
+        for down in (0, 1)
+        for right in (0, 1)
+    }
+    assert {(top // side, left // side) for top, left, _, _ in windows} == touched
+    alone = [RasterReader(layer, 1, frame).sample(*place) for place in places]
+    for one, other, third in zip(together, again, alone):
+        assert one.tobytes() == other.tobytes() == third.tobytes()
+
+
+def test_what_is_kept_is_bounded(tmp_path, frame, monkeypatch):
+    """Room for 9 tiles of 8 x 8 cells: a whole grid, a line that comes back, and lines within the room; what is kept
+    never takes more, values are the same, and only what has been pushed out is read again."""
+    layer = global_grid(tmp_path / "a.tif", 0.5)
+    longitude, latitude = np.meshgrid(np.arange(2.0, 340.0, 3.0), np.arange(-80.0, 80.0, 3.0))
+    whole = RasterReader(layer, 1, frame).sample(longitude, latitude)
+    monkeypatch.setattr(rasters, "Tiles", partial(Tiles, side_bits=3, most_bytes=9 * 8 * 8 * 8))
+    windows = watched_reads(monkeypatch)
+    reader = RasterReader(layer, 1, frame)
+    assert reader.sample(longitude, latitude).tobytes() == whole.tobytes()
+    assert reader._tiles._pool.nbytes <= 9 * 8 * 8 * 8
+    assert len(reader._tiles._kept) == 9
+    assert len(set(windows)) == len(windows)
+    windows.clear()
+    near = np.linspace(100.6, 110.4, 50)
+    first = reader.sample(near, 11.0)
+    fresh = len(windows)
+    assert 0 < fresh <= 4
+    assert reader.sample(near[::-1], 11.0)[::-1].tobytes() == first.tobytes()
+    assert len(windows) == fresh
+    reader.sample(longitude, latitude)
+    windows.clear()
+    reader.sample(near, 11.0)
+    assert len(windows) == fresh
+
+
+def test_memory_of_a_band_is_some_tens_of_megabytes(tmp_path, frame):
+    """Whatever the type of the cells and however large the raster."""
+    for kind in ("Byte", "Int32", "Float64"):
+        layer = write(tmp_path / f"{kind}.tif", np.zeros((1200, 3600)), 0.0, 60.0, 0.1, kind=getattr(gdal, f"GDT_{kind}"))
+        reader = RasterReader(layer, 1, frame)
+        reader.sample(*np.meshgrid(np.arange(1.0, 359.0, 0.5), np.arange(-59.0, 59.0, 0.5)))
+        assert reader._tiles._pool.nbytes <= MOST_BYTES == 32 * 2**20
 
 
 def test_points_beyond_what_memory_holds_at_once(tmp_path, frame, monkeypatch):

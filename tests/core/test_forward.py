@@ -26,6 +26,12 @@ def model(**changes):
     return TransectModel(**{**given, **changes})
 
 
+def columns_of(plate, thickness, break_at, at):
+    """Offset (positions,) and columns (positions, p) of one thickness."""
+    offsets, columns = plate.columns(np.array([thickness]), break_at, at)
+    return offsets[0], columns[0]
+
+
 def broken_end(x, thickness, shear, moment):
     """w = alpha^2 e^-s / (2 D) [(V0 alpha + M0) cos s - M0 sin s], s = x / alpha (Turcotte & Schubert, Geodynamics,
     section 3.16, from memory)."""
@@ -43,7 +49,7 @@ def test_columns_of_a_broken_plate_are_the_closed_form(break_at):
     thickness = 25e3
     plate = model(kind=BROKEN, shear=True, moment=True, regional=3)
     at = np.linspace(break_at, 590e3, 200)
-    offset, columns = plate.columns(thickness, break_at, at)
+    offset, columns = columns_of(plate, thickness, break_at, at)
     assert (offset == 0).all()
     scale = broken_end(0.0, thickness, 1.0, 0.0)
     np.testing.assert_allclose(-columns[:, 0], broken_end(at - break_at, thickness, 1.0, 0.0), atol=2e-5 * scale)
@@ -57,7 +63,7 @@ def test_a_line_load_on_a_continuous_plate():
     thickness, place = 20e3, 201e3
     plate = model(kind=CONTINUOUS, shear=True, moment=True, regional=0)
     assert plate.end_forces == ("end_shear",)
-    _, columns = plate.columns(thickness, place, X)
+    _, columns = columns_of(plate, thickness, place, X)
     rigidity = ELASTIC.rigidity(thickness)
     alpha = flexural_parameter(rigidity, K)
     s = np.abs(X - place) / alpha
@@ -65,12 +71,26 @@ def test_a_line_load_on_a_continuous_plate():
     np.testing.assert_allclose(-columns[:, 0], expected, atol=2e-4 * expected.max())
 
 
+def test_trials_together_are_the_trials_one_by_one():
+    """Plates of about one thickness share their nodes; the elements then taken are finer, which shows at 1e-6."""
+    rng = np.random.default_rng(3)
+    stiffness = np.where(np.arange(X.size - 1) < 40, 600 * 9.81, K)
+    load = np.where(X < 200e3, rng.uniform(0.0, 5e7, X.size), 0.0)
+    plate = model(load=load, kind=BROKEN, stiffness=stiffness, shear=True, moment=True, regional=2)
+    thicknesses = np.array([40e3, 1e3, 1.3e3, 9e3, 10e3, 11e3, 39e3])
+    offsets, columns = plate.columns(thicknesses, 50e3, X[20:])
+    for trial, thickness in enumerate(thicknesses):
+        offset, alone = columns_of(plate, thickness, 50e3, X[20:])
+        np.testing.assert_allclose(offsets[trial], offset, atol=3e-6 * abs(offset).max())
+        np.testing.assert_allclose(columns[trial] / abs(alone).max(axis=0), alone / abs(alone).max(axis=0), atol=3e-6)
+
+
 def test_bending_is_linear_in_load_and_forces():
     """bend() of two forces and a load is the sum of the columns."""
     rng = np.random.default_rng(1)
     plate = model(load=rng.normal(size=X.size) * 1e6, kind=BROKEN, shear=True, moment=True, regional=0)
     forces = np.array([1.1e12, -3e16])
-    offset, columns = plate.columns(30e3, 50e3, X[20:])
+    offset, columns = columns_of(plate, 30e3, 50e3, X[20:])
     np.testing.assert_allclose(-plate.bend(30e3, 50e3, forces).at(X[20:])[:, 0], offset + columns @ forces, rtol=1e-9)
 
 
@@ -99,14 +119,13 @@ def test_elements_follow_the_flexural_parameter(thickness):
 def test_a_break_at_the_end_leaves_no_plate():
     """The message says where."""
     with pytest.raises(DownwarpError, match="The break at 600 km leaves no plate before the line's end at 600 km"):
-        model(kind=BROKEN, shear=True).columns(20e3, 600e3, X)
+        columns_of(model(kind=BROKEN, shear=True), 20e3, 600e3, X)
 
 
 def test_infill_jumps_where_the_load_ends():
-    """rho_under between stations that both carry load, rho_infill elsewhere."""
-    under = np.array([False, True, True, True, False])
-    stiffness = infill_stiffness(np.arange(5.0), under, 3300, 2400, 2800, 10.0)
-    np.testing.assert_allclose(stiffness, [9000, 5000, 5000, 9000])
+    """rho_under on the load's ground, rho_infill elsewhere, by its share where it ends between stations."""
+    stiffness = infill_stiffness(np.array([0.0, 1.0, 1.0, 0.25]), 3300, 2400, 2800, 10.0)
+    np.testing.assert_allclose(stiffness, [9000, 5000, 5000, 8000])
 
 
 def test_the_fluid_is_water_below_sea_level_and_air_above():

@@ -179,6 +179,27 @@ def test_reference_level_is_read_back_from_the_load():
         assert found == pytest.approx(level, abs=1e-8)
 
 
+def test_cells_see_a_model_as_they_see_readings():
+    """1000 uneven readings of x^2 (in 100 km) averaged into cells by their sigmas: the mean of x^2 over the two places
+    of a cell is the cell's mean reading, though x^2 at the cell's middle is not."""
+    rng = np.random.default_rng(2)
+    x = np.sort(rng.uniform(0.0, 500e3, 1000))
+    data = joint._data(joint.Readings(x, (x / 1e5) ** 2, rng.uniform(1.0, 3.0, 1000)), 1, "surface")
+    assert data.at.size < 120
+    assert data.average((data.pairs / 1e5) ** 2) == pytest.approx(data.value, rel=1e-9)
+    assert np.abs((data.at / 1e5) ** 2 - data.value).max() > 1e-5
+
+
+def test_what_the_surface_leaves_is_averaged_over_its_noise():
+    """Two settings of weights 1/4 and 3/4 with means 0 and 4 and variances 1 and 2: mean 3, variance 7/4 within and 3
+    between."""
+    weight = np.array([[0.25], [0.75]])
+    mean, spread = np.array([[[0.0]], [[4.0]]]), np.array([[[[1.0]]], [[[2.0]]]])
+    left = joint._left(weight, mean, spread)
+    assert left.mean.item() == pytest.approx(3.0)
+    assert left.precision.item() == pytest.approx(1 / (1.75 + 3.0))
+
+
 RIDGE_SEEDS = (0, 1, 2)
 
 

@@ -335,6 +335,13 @@ def test_a_spare_parameter_costs():
     assert posterior.compare(*fits).log_odds > 1.0
 
 
+def test_a_surface_without_any_relief_is_not_resolved():
+    """Everything observed is 0: the regional alone has nothing to explain, and no plate is told from it."""
+    fit = posterior.thickness_posterior(np.zeros(X.size), X, trench(), 2, *TE_RANGE)
+    assert not fit.resolved and (fit.te_interval.low, fit.te_interval.high) == (None, None)
+    assert np.isfinite(fit.log_odds_bent)
+
+
 def test_models_of_different_stations_are_not_compared():
     rng = np.random.default_rng(19)
     model = trench()

@@ -116,6 +116,38 @@ def test_the_load_area_and_window_limit_the_load():
     assert not np.isin(problem.observations().station, np.flatnonzero(inside)).any()
 
 
+def test_infill_beneath_the_load_fills_its_whole_ground():
+    """An area of 218 to 402 km on which relief sinks below the level in places, as noise does at a load's foot: there is no
+    load there, but the infill goes on beneath; intervals that the area's edge cuts count by their share."""
+    relief = profile().relief.copy()
+    inside = (X >= 218e3) & (X <= 402e3)
+    low = np.flatnonzero(inside)[[1, 5]]
+    relief[low] = -5100.0
+    share = np.clip((np.minimum(X[1:], 402e3) - np.maximum(X[:-1], 218e3)) / np.diff(X), 0, 1)
+    made = profile(relief, in_load_area=inside, load_area_share=share)
+    problem = prepare(made, FitOptions(setting=VOLCANO, reference_level=-5000.0, rho_under_load=2800))
+    assert not problem.under_load[low].any() and not problem.load[low].any()
+    np.testing.assert_allclose(problem.ground_share, share)
+    infill = problem.infill_density(problem.model(0))[:-1]
+    np.testing.assert_allclose(infill, 1030 + share * (2800 - 1030))
+    windowed = prepare(made, FitOptions(
+        setting=VOLCANO, reference_level=-5000.0, rho_under_load=2800, load_from=301e3))  # fmt: skip
+    assert (windowed.ground_share * np.diff(X)).sum() == pytest.approx(402e3 - 301e3)
+
+
+def test_a_station_beside_the_break_mixes_both_sides():
+    """In a DEM of 5 km cells that shows both sides of a trench, the readings within a cell of the break are left out; where
+    the bent surface is a layer of its own, or the cell is unknown, they count."""
+    relief = -5000.0 - 2000.0 * np.exp(-np.abs(X - MIDDLE) / 80e3)
+    for resolution, first in ((5e3, MIDDLE + 5e3), (0.0, MIDDLE)):
+        problem = prepare(profile(relief, resolution=resolution), FitOptions(setting=TRENCH))
+        seen = problem.observations().distance
+        assert seen.min() == pytest.approx(X[first - 1.0 <= X].min())
+    options = FitOptions(setting=TRENCH, break_at=2, break_position=MIDDLE)
+    problem = prepare(profile(relief, observed=relief, resolution=5e3), options)
+    assert problem.observations().distance.min() == pytest.approx(X[X >= MIDDLE].min())
+
+
 def test_gaps_are_bridged_with_a_remark():
     """Three stations without DEM on the mount."""
     relief = mount()

@@ -2,13 +2,17 @@
 
 Byerlee 1978 prints tau = 0.85 sigma_n up to 200 MPa and 50 MPa + 0.6 sigma_n beyond: both 170 MPa at the corner. Goetze &
 Evans 1979 with McNutt & Menard 1982 print rate = 7.0e-14 Pa^-3 s^-1 exp(-520 kJ/mol / RT) sigma^3 below 200 MPa and
-5.7e11 s^-1 exp[-535 kJ/mol / RT (1 - sigma / 8.5 GPa)^2] above. All sources from memory.
+5.7e11 s^-1 exp[-535 kJ/mol / RT (1 - sigma / 8.5 GPa)^2] above. These printed numbers are from memory, as `constants` says
+beside each; no source printed a stress at a temperature that could be quoted here. What does not hang on memory: identities
+of the laws (a strength, put back, flows at the strain rate; what rate and heat do to it), the sliding law's own consistency
+at its corner, gas constant and zero of scipy, and ranges of outer rises whose abstracts were read.
 """
 
 import math
 
 import numpy as np
 import pytest
+from downwarp_checkout.plugin.core import constants as c
 from downwarp_checkout.plugin.core import strength
 from downwarp_checkout.plugin.core.constants import (
     GAS,
@@ -19,7 +23,7 @@ from downwarp_checkout.plugin.core.constants import (
     YEAR,
     ZERO_CELSIUS,
 )
-from downwarp_checkout.plugin.core.cooling import PLATE, STEADY, usual
+from downwarp_checkout.plugin.core.cooling import HALF_SPACE, PLATE, STEADY, usual
 from downwarp_checkout.plugin.core.elastic import Elastic
 from downwarp_checkout.plugin.core.errors import DownwarpError
 from downwarp_checkout.plugin.core.strength import CONTINENTAL, Envelope, Rock
@@ -82,6 +86,70 @@ def test_olivine_at_test_points(celsius, rate):
     found = float(strength.olivine_strength(celsius, rate))
     expected = creep if creep <= 200e6 else max(min(creep, glide), 200e6)
     assert found == pytest.approx(expected, rel=1e-9)
+
+
+@pytest.mark.parametrize("rate", [1e-18, 1e-15, 1e-13])
+def test_strength_put_back_flows_at_the_strain_rate(rate):
+    """Each law turned round: the rate of the strength found is the one asked for to 1e-12, olivine at creep and at glide,
+    and quartzite; between the two olivine laws the strength stands at 200 MPa, where creep is slower and glide faster."""
+    celsius = np.linspace(200.0, 1300.0, 111)
+    heat = GAS.value * (celsius + ZERO_CELSIUS.value)
+    found = strength.olivine_strength(celsius, rate)
+    creep = c.OLIVINE_FACTOR.value * found**c.OLIVINE_POWER.value * np.exp(-c.OLIVINE_ENERGY.value / heat)
+    glide = c.PEIERLS_RATE.value * np.exp(-c.PEIERLS_ENERGY.value / heat * (1 - found / c.PEIERLS_STRESS.value) ** 2)
+    creeps, glides = found < c.PEIERLS_FROM.value, found > c.PEIERLS_FROM.value
+    assert creeps.sum() > 10 and glides.sum() > 10
+    assert creep[creeps] == pytest.approx(rate, rel=1e-12)
+    # Of the two above 200 MPa, the weaker counts: the faster one has the rate.
+    assert np.maximum(creep, glide)[glides] == pytest.approx(rate, rel=1e-12)
+    rest = ~creeps & ~glides
+    assert (creep[rest] <= rate * (1 + 1e-12)).all() and (glide[rest] >= rate * (1 - 1e-12)).all()
+    found = strength.quartz_strength(celsius, rate)
+    back = c.QUARTZ_FACTOR.value * found**c.QUARTZ_POWER.value * np.exp(-c.QUARTZ_ENERGY.value / heat)
+    assert back == pytest.approx(rate, rel=1e-12)
+
+
+def test_creep_by_rate_and_by_heat():
+    """10^n times the rate is 10 times the stress; d ln sigma / d (1 / T) is Q / (n R)."""
+    cold, warm = 900.0, 1000.0
+    one = strength.olivine_strength(np.array([cold, warm]), 1e-17)
+    ten = strength.olivine_strength(np.array([cold, warm]), 1e-17 * 10**c.OLIVINE_POWER.value)
+    assert one.max() < ten.max() < 200e6 and ten / one == pytest.approx(10.0, rel=1e-12)
+    slope = np.log(one[0] / one[1]) / (1 / (cold + 273.15) - 1 / (warm + 273.15))
+    assert slope == pytest.approx(c.OLIVINE_ENERGY.value / (c.OLIVINE_POWER.value * GAS.value), rel=1e-12)
+
+
+def test_sliding_laws_meet_at_the_corner():
+    """0.85 x 200 MPa = 50 MPa + 0.6 x 200 MPa: the three printed numbers are tied by the fourth, the corner."""
+    corner = c.COHESION_HIGH.value / (c.FRICTION_LOW.value - c.FRICTION_HIGH.value)
+    assert corner == pytest.approx(200e6, rel=1e-12)
+
+
+@pytest.mark.parametrize("age", [20, 40, 60, 80, 100])
+def test_outer_rises_follow_the_root_of_age(age):
+    """McAdoo & Martin 1984 (abstract read): at six outer rises Te is about 4 km times the root of age in Myr. A cooling
+    plate of dry olivine has that thickness at a curvature between 1e-7 and 5e-7 /m, which outer rises have."""
+    found = strength.envelope(Rock(), usual(PLATE, age=age * MYR))
+    gentle, strong = (
+        strength.effective_thickness(strength.bend_envelope(found, k, ELASTIC), ELASTIC) for k in (1e-7, 5e-7)
+    )
+    assert strong < 4e3 * math.sqrt(age) < gentle
+
+
+def test_old_plates_at_a_western_pacific_trench():
+    """Zhang, Lin & Zhou (abstract read): Te 20 to 65 km seaward, 11 to 33 km near the axis, end moments up to 2.2e17 N. A
+    plate of 150 Myr is as thick where it is bent little, as thin where it is bent much; the largest moment lies between
+    those that a cooling plate and a cooling half-space carry."""
+    limits = []
+    for kind in (PLATE, HALF_SPACE):
+        found = strength.envelope(Rock(), usual(kind, age=150 * MYR))
+        limits.append(strength.bend_envelope(found, 1e-3, ELASTIC).moment)
+    assert limits[0] < 2.2e17 < limits[1]
+    found = strength.envelope(Rock(), usual(PLATE, age=150 * MYR))
+    far, near = (
+        strength.effective_thickness(strength.bend_envelope(found, k, ELASTIC), ELASTIC) for k in (1e-8, 1e-6)
+    )
+    assert 20e3 < far < 65e3 and 11e3 < near < 33e3
 
 
 def test_olivine_glides_in_the_cold():

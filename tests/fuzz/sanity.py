@@ -212,6 +212,25 @@ def _choices(rows: list[dict], parameters: dict) -> Iterator[str]:
         yield from _ordered("te_low_km <= te_km <= te_high_km", row["te_low_km"], row["te_km"], row["te_high_km"])
 
 
+def _along_strike(rows: list[dict], parameters: dict) -> Iterator[str]:
+    last = 0.0
+    known = {row["along_strike_km"] is not None for row in rows}
+    if len(known) > 1:
+        yield "along_strike_km is known for some transects only"
+    for number, row in enumerate(rows):
+        for name in ("te_{}km", "break_{}km", "end_shear_{}n_per_m", "end_moment_{}n"):
+            low, value, high = (row[name.format(part)] for part in ("low_", "", "high_"))
+            # An interval of little confidence need not hold the best value, which belongs to the best thickness.
+            held = (low, value, high) if name == "te_{}km" else (low, high)
+            yield from _ordered(f"low <= value <= high of {name.format('')}", *held)
+        along = row["along_strike_km"]
+        if along is None:
+            continue
+        if along < last or (number == 0 and along != 0):
+            yield f"along_strike_km begins with or falls to {along} after {last}"
+        last = along
+
+
 def _transects(rows: list[dict], parameters: dict) -> Iterator[str]:
     for row in rows:
         if row["geometry"] is None or row["geometry"].isEmpty():
@@ -225,5 +244,6 @@ CHECKS = {
     "PARAMETERS": _parameters,
     "MISFIT": _misfit,
     "CHOICES": _choices,
+    "ALONG_STRIKE": _along_strike,
     "TRANSECTS": _transects,
 }

@@ -78,6 +78,37 @@ def test_profiles(changes, words):
     assert (not found) if words is None else any(words in fault for fault in found), found
 
 
+ALONG_STRIKE = (
+    "transect", "along_strike_km", "te_low_km", "te_km", "te_high_km", "break_low_km", "break_km", "break_high_km",
+    "end_shear_low_n_per_m", "end_shear_n_per_m", "end_shear_high_n_per_m", "end_moment_low_n", "end_moment_n",
+    "end_moment_high_n",
+)  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    ("changes", "words"),
+    [
+        ([{}, {"along_strike_km": 25.0}, {"along_strike_km": 25.0}], None),
+        ([{"along_strike_km": None}, {"along_strike_km": None}], None),
+        ([{}, {"along_strike_km": None}], "along_strike_km is known for some transects only"),
+        ([{"along_strike_km": 5.0}], "begins with or falls to 5.0"),
+        ([{}, {"along_strike_km": 50.0}, {"along_strike_km": 25.0}], "falls to 25.0 after 50.0"),
+        ([{"te_low_km": 31.0}], "low <= value <= high of te_km does not hold"),
+        ([{"end_shear_low_n_per_m": 3e12}], "low <= value <= high of end_shear_n_per_m does not hold"),
+    ],
+)
+def test_along_strike(changes, words):
+    """Distances from 0 on that do not fall, for all or for none, and bounds in order."""
+    sound = {
+        "transect": "a", "along_strike_km": 0.0, "te_low_km": 25.0, "te_km": 30.0, "te_high_km": None,
+        "end_shear_low_n_per_m": 1e12, "end_shear_n_per_m": 1.5e12, "end_shear_high_n_per_m": 2e12,
+    }  # fmt: skip
+    rows = [{**sound, **change} for change in changes]
+    made = layer("Point", ALONG_STRIKE, *(("Point (1 2)", *(row.get(name) for name in ALONG_STRIKE)) for row in rows))
+    found = faults("ALONG_STRIKE", made)
+    assert (not found) if words is None else any(words in fault for fault in found), found
+
+
 @pytest.mark.parametrize(
     ("text", "sound"),
     [

@@ -161,7 +161,7 @@ def test_strike_figure_marks_the_unresolved_and_keeps_the_order_along_the_guide(
     assert [line.get_xdata()[0] for line in crosses] == [0.0]
     np.testing.assert_allclose(lines_by_label(places)["break"].get_xdata(), [0.0, 25.0, 50.0])
     np.testing.assert_allclose(lines_by_label(places)["break"].get_ydata(), [60.0, 55.0, 60.0])
-    assert shear.get_xlabel() == "distance along the guide, km"
+    assert shear.get_xlabel() == "distance along strike, km"
     by_number = figures.strike_figure([replace(row, along=None) for row in rows], (1e3, 100e3))
     assert by_number.axes[-1].get_xlabel() == "number of the transect"
     assert figures.strike_figure(rows[:1], (1e3, 100e3)) is None

@@ -17,7 +17,9 @@ from pathlib import Path
 CHECKOUT = Path(__file__).resolve().parents[2]
 FILES = ("__init__.py", "metadata.txt", "LICENSE", "README.md", "CHANGELOG.md")
 FOLDERS = ("plugin", "algorithms", "icons")
-SUFFIXES = {".html", ".json", ".model3", ".png", ".py", ".svg"}
+SUFFIXES = {".html", ".json", ".model3", ".png", ".py", ".qm", ".svg"}
+SOURCES = {".ts"}
+"""Suffixes of what is in the folders and does not ship: translations before they are compiled."""
 
 
 def metadata(checkout: Path = CHECKOUT) -> configparser.SectionProxy:
@@ -35,7 +37,7 @@ def members(checkout: Path = CHECKOUT) -> Iterator[Path]:
     for folder in FOLDERS:
         for path in sorted((checkout / folder).rglob("*")):
             inner = path.relative_to(checkout)
-            if path.is_dir() or "__pycache__" in inner.parts:
+            if path.is_dir() or "__pycache__" in inner.parts or path.suffix in SOURCES:
                 continue
             if path.suffix not in SUFFIXES or path.name.startswith("."):
                 raise ValueError(f"{inner} is no file that Downwarp ships ({', '.join(sorted(SUFFIXES))})")
