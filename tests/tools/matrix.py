@@ -192,7 +192,8 @@ def _laying(what: str, command: list[str], variables: dict[str, str], end: float
     except subprocess.TimeoutExpired:
         raise NotLaid(f"{what} was not done within {LAYING_S} s of the beginning") from None
     if done.returncode:
-        last = "\n".join(done.stdout.strip().splitlines()[-5:])
+        # debootstrap tells of its steps by lines with I.
+        last = "\n".join([line for line in done.stdout.splitlines() if line and not line.startswith("I: ")][-5:])
         raise NotLaid(f"{what} failed: {last or 'it says nothing'}")
 
 
@@ -373,8 +374,10 @@ def main(suites: tuple[str, ...]) -> int:
     for row in rows:
         if row.words:
             print(f"\n{row.words}")
-    print()
-    show([*here(), *rows])
+    every = [*here(), *rows]
+    if every:
+        print()
+        show(every)
     return sum(row.failed > 0 for row in rows)
 
 
