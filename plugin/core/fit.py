@@ -155,7 +155,10 @@ def _strip_checked(problem: Problem, fit: Fit) -> tuple[str, ...]:
     from .strip_check import check_strip, strip_remarks
 
     try:
-        options = replace(options, reference_level=problem.reference_level)
+        # Of what a plan view has no place for, the infill matters little to the shape of the load.
+        options = replace(
+            options, reference_level=problem.reference_level, rho_under_load=None, fill_sinking_only=False
+        )
         checked = check_strip(problem.profile, plan, options, thickness.value)
     except DownwarpError as error:
         return (say("the strip was not checked: {why}", why=error.message),)
@@ -401,20 +404,16 @@ def trial_columns(
 
 def _filled(model: TransectModel, thickness: float, break_position: float, seen: Observations) -> TransectModel:
     """The model with infill where the plate sinks under its best-fitting end forces."""
-    forces = np.zeros(len(model.end_forces))
-    bent, _ = model.filled(thickness, break_position, forces)
-    if forces.size == 0:
-        return bent
-    for _ in range(10):
-        offsets, trials = bent.columns(np.array([thickness]), break_position, seen.distance)
-        scale = np.abs(trials[0]).max(axis=0)
-        best = np.linalg.lstsq(trials[0] / scale, seen.elevation - offsets[0], rcond=None)[0] / scale
-        settled = np.allclose(best[: forces.size], forces, rtol=1e-6, atol=0.0)
-        forces = best[: forces.size]
-        bent, _ = model.filled(thickness, break_position, forces)
-        if settled:
-            break
-    return bent
+    count, forces = seen.distance.size, len(model.end_forces)
+
+    def sunk(bent: TransectModel, at: np.ndarray) -> np.ndarray:
+        places = np.concatenate([seen.distance, at])
+        offsets, columns = (part[0] for part in bent.columns(np.array([thickness]), break_position, places))
+        scale = np.maximum(np.abs(columns[:count]).max(axis=0), 1e-300)
+        best = np.linalg.lstsq(columns[:count] / scale, seen.elevation - offsets[:count], rcond=None)[0] / scale
+        return -offsets[count:] - columns[count:, :forces] @ best[:forces]
+
+    return model.filled_where(sunk, break_position)[0]
 
 
 def _as_fit(problem: Problem, model: TransectModel, posterior: Posterior, seen: Observations, searched: bool) -> Fit:

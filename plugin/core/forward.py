@@ -8,6 +8,7 @@ end shear acts as a line load at the place of the break, and there is no end mom
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 from functools import cached_property
 
@@ -225,21 +226,29 @@ class TransectModel:
         """This model with infill only where the plate sinks under its load and ``forces``; False if not converged.
 
         Infill of stiffness k_i in place of a fluid of stiffness k_f, once w exceeds the depth d, presses with
-        k_f w - (k_f - k_i)(w - d): the plate floats on k_i and carries (k_f - k_i) d less. The set of
-        filled intervals is found by fixed rounds of solving and marking.
+        k_f w - (k_f - k_i)(w - d): the plate floats on k_i and carries (k_f - k_i) d less.
         """
+
+        def sunk(model: TransectModel, at: np.ndarray) -> np.ndarray:
+            return model.bend(thickness, break_position, forces).at(at)[:, 0]
+
+        return self.filled_where(sunk, break_position)
+
+    def filled_where(
+        self, sunk: Callable[[TransectModel, np.ndarray], np.ndarray], break_position: float
+    ) -> tuple[TransectModel, bool]:
+        """The same with the deflection that ``sunk`` gives for a model at positions on the plate, m; the set of filled
+        intervals is found by rounds of solving and marking."""
         if self.fill is None:
             return self, True
         middle = 0.5 * (self.distance[1:] + self.distance[:-1])
+        on_plate = middle >= (break_position if self.kind == BROKEN else -np.inf)
         sinking = np.zeros(middle.size, dtype=bool)
         seen: list[bytes] = []
         model = self._with_fill(sinking)
         for _ in range(FILL_ROUNDS):
-            bending = model.bend(thickness, break_position, forces)
-            nodes = bending.plate.nodes
-            on_plate = middle >= nodes[0]
             deflection = np.zeros(middle.size)
-            deflection[on_plate] = bending.at(middle[on_plate])[:, 0]
+            deflection[on_plate] = sunk(model, middle[on_plate])
             now = deflection > self.fill.depth
             if (now == sinking).all():
                 return model, True

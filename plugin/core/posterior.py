@@ -818,7 +818,7 @@ def _remarks(resolved, odds, te_interval, break_interval, te_from, te_to, noise,
     outliers = int((noise.extra > 0).sum())
     if outliers:
         remarks.append(say("{outliers} stations were down-weighted as outliers.", outliers=outliers))
-    if tempering > 1.0 and resolved:
+    if tempering >= 1.05 and resolved:
         remarks.append(
             say(
                 "Residuals have heavy tails: intervals were widened (likelihood tempered by {tempering:.2g}).",

@@ -27,6 +27,7 @@ OPTION_WORDS = {
     "REGIONAL": REGIONAL_WORDS,
     "ROBUST": (say("no"), say("yes")),
     "FILL_SINKING_ONLY": (say("no"), say("yes")),
+    "LOAD_SHAPE": (say("strip"), say("as mapped")),
 }
 """What the numbers of enumerated options mean, in the order of their keys."""
 

@@ -320,8 +320,10 @@ def test_a_strip_that_does_not_do_is_told(disk):
         {"FIT_FROM": 1, "PLATE": 1, "END_FORCES": 1},
     ):
         assert "strip" not in (fit(disk["both"], **keys)["PROFILES"][0]["remarks"] or "")
-    two_infills = fit(disk["both"], FIT_FROM=1, RHO_UNDER_LOAD=1030)["PROFILES"][0]["remarks"]
-    assert "the strip was not checked: A plan view takes one infill density" in two_infills
+    two_infills = fit(disk["both"], FIT_FROM=1, RHO_UNDER_LOAD=1040)["PROFILES"][0]["remarks"]
+    assert "the load is no strip: fitted with one, a plate of" in two_infills
+    pushed = fit(disk["both"], FIT_FROM=1, IN_PLANE=1e11)["PROFILES"][0]["remarks"]
+    assert "the strip was not checked: IN_PLANE is 1e+11; a plan view takes no in-plane force" in pushed
 
 
 @pytest.fixture(scope="module")
