@@ -106,10 +106,10 @@ def main(counts: list[int]) -> None:
         qgis.enable()
         qgis.run("demolayers", {"OUTPUT_FOLDER": folder})
         sys.stdout.write(
-            "\n| transects of 201 stations | seconds | ms each, less starting | MB | MB of workers |\n"
-            "| ---: | ---: | ---: | ---: | ---: |\n"
+            "\n| transects of 201 stations | seconds | ms each, less starting | ms for one more | MB | MB of workers |\n"
+            "| ---: | ---: | ---: | ---: | ---: | ---: |\n"
         )
-        starting = None
+        starting = before = None
         for count in [1, *counts]:
             laid = folder / f"laid{count}.gpkg"
             spacing = 2 * GUIDE_KM if count == 1 else GUIDE_KM / (count - 1)
@@ -125,8 +125,12 @@ def main(counts: list[int]) -> None:
             runs = [measured(qgis, keys, name) for _ in range(REPEATS if count <= FEW else 1)]
             taken, own, workers = (min(each[0] for each in runs), *(max(each[part] for each in runs) for part in (1, 2)))
             starting = taken if starting is None else starting
-            each = "" if count == 1 else f"{(taken - starting) / (count - 1) * 1e3:.0f}"
-            sys.stdout.write(f"| {count} | {taken:.2f} | {each} | {own:.0f} | {workers:.0f} |\n")
+            each = further = ""
+            if before is not None:
+                each = f"{(taken - starting) / (count - 1) * 1e3:.0f}"
+                further = f"{(taken - before[1]) / (count - before[0]) * 1e3:.0f}"
+            before = count, taken
+            sys.stdout.write(f"| {count} | {taken:.2f} | {each} | {further} | {own:.0f} | {workers:.0f} |\n")
             sys.stdout.flush()
         sys.stdout.write("\n| cancel, run of many | times | longest, s | mean, s |\n| --- | ---: | ---: | ---: |\n")
         asked = {key: value for key, value in keys.items() if key not in SINKS}
