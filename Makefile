@@ -10,7 +10,7 @@ help:
 	@echo 'make demo       make the demo layers, fit them, compare with the truth; layers in build/demo'
 	@echo 'make test       lint, types and all tests'
 	@echo 'make matrix     all tests in other releases of QGIS, each in a Debian of its own'
-	@echo 'make fuzz       20,000 hostile runs and 100 that are killed; about an hour'
+	@echo 'make fuzz       20,000 hostile runs and 100 that are killed; some 20 minutes'
 	@echo 'make bench      speed beside general libraries, QGIS and GDAL, and of runs of many transects'
 	@echo 'make calibrate  how often the intervals hold the truth'
 	@echo 'make zip        the plugin as QGIS installs it, in build/'
