@@ -154,13 +154,6 @@ class Plate:
             if getattr(self, name) not in (CONTINUES, BROKEN, PINNED, CLAMPED):
                 raise DownwarpError("{name} is {value!r}; it takes 0 to 3.", name=name, value=getattr(self, name))
 
-    def at_gauss(self, name: str) -> np.ndarray:
-        """Values of ``rigidity`` or ``stiffness`` at the Gauss points, shape (elements, 4), or (1, 4) if uniform."""
-        values = getattr(self, name)
-        if values.ndim == 2:
-            return values
-        return np.broadcast_to(values.reshape(-1, 1), (values.size, 4))
-
     @cached_property
     def lengths(self) -> np.ndarray:
         """Lengths of the elements, m."""
@@ -458,10 +451,10 @@ class Plate:
         h = self._spans
         ends = np.stack([unknowns[i : unknowns.shape[0] - 3 + i : 2] for i in range(4)])
         ends[1::2] *= self._ratio[:, None]
-        forces = self._act(0, self.at_gauss("stiffness").T * h, ends)
+        forces = self._act(0, self._by_point("stiffness") * h, ends)
         ends[2] -= ends[0]
         ends[0] = 0.0
-        forces += self._act(2, self.at_gauss("rigidity").T / (h * h * h), ends)
+        forces += self._act(2, self._by_point("rigidity") / (h * h * h), ends)
         if self.in_plane:
             forces -= self._act(1, self.in_plane / h[None], ends)
         forces[1::2] *= self._ratio[:, None]
@@ -469,7 +462,7 @@ class Plate:
 
     @staticmethod
     def _act(derivative: int, resistance: np.ndarray, ends: np.ndarray) -> np.ndarray:
-        """Forces on the unknowns ``ends`` of what resists a derivative of w by t; ``resistance`` (points, elements)."""
+        """Forces on the unknowns ``ends`` of what resists a derivative of w by t; ``resistance`` as `_by_point`."""
         shape = _SHAPES[derivative]
         felt = _combine(shape.T, ends)
         felt *= (resistance * _WEIGHTS[:, None])[:, :, None]
@@ -559,7 +552,7 @@ class Bending:
     def foundation_force(self) -> np.ndarray:
         """Total restoring force of the foundation under the nodes' span, int k w dx, N/m, shape (loads,)."""
         points = gauss_positions(self.plate.nodes)
-        weights = self.plate.at_gauss("stiffness") * self.plate.lengths[:, None] * _WEIGHTS
+        weights = self.plate._by_point("stiffness").T * self.plate.lengths[:, None] * _WEIGHTS
         return weights.ravel() @ self.at(points.ravel())
 
     def at(self, positions, derivative: int = 0) -> np.ndarray:

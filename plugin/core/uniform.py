@@ -19,7 +19,7 @@ once for all breaks.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from functools import lru_cache
 
 import numpy as np
@@ -42,27 +42,24 @@ def is_uniform(model: TransectModel) -> bool:
     )
 
 
-@dataclass(frozen=True)
 class UniformBreak:
     """Predicted surfaces of a uniform plate (`is_uniform`) at fixed positions, for any thickness and break."""
 
-    model: TransectModel
-    positions: np.ndarray
-    """Where the surface is predicted, m, shape (N,)."""
-
-    def __post_init__(self) -> None:
-        whole = replace(self.model, kind=CONTINUOUS, shear=False, moment=False)
+    def __init__(self, model: TransectModel, positions: np.ndarray) -> None:
+        """``positions``: where the surface is predicted, m, shape (N,)."""
+        self.model, self.positions = model, positions
+        whole = replace(model, kind=CONTINUOUS, shear=False, moment=False)
 
         @lru_cache(maxsize=1)
         def unbroken(thicknesses: bytes) -> tuple[np.ndarray, np.ndarray]:
-            return whole.columns(np.frombuffer(thicknesses), 0.0, self.positions)
+            return whole.columns(np.frombuffer(thicknesses), 0.0, positions)
 
-        object.__setattr__(self, "_unbroken", unbroken)
+        self._unbroken = unbroken
 
     def columns(self, thicknesses: np.ndarray, break_position: float) -> tuple[np.ndarray, np.ndarray]:
         """Offsets (T, N) and columns (T, N, p) as `TransectModel.columns` gives them, for thicknesses (T,), m; before
         the break of a broken plate they hold the regional alone."""
-        offsets, regional = self._unbroken(thicknesses.tobytes())  # type: ignore[attr-defined]
+        offsets, regional = self._unbroken(thicknesses.tobytes())
         rigidity = self.model.elastic.rigidity(thicknesses)[:, None]
         stiffness = float(self.model.stiffness[0])
         alpha = flexural_parameter(rigidity, stiffness)
