@@ -16,7 +16,7 @@ from .keys import Values
 from .outputs import Track
 from .picks import number_of
 from .runs import Item, Progress
-from .stations import has_places
+from .stations import fields_in_use, has_places
 
 COLUMNS = {
     "deflection_m": "deflection", "te_km": "thickness", "curvature_per_m": "curvature", "dem_m": "relief",
@@ -30,14 +30,7 @@ UNITS = {"te_km": 1e3, "load_mpa": 1e6}
 
 def plate_fields(values: Values, source: QgsFeatureSource, needed: tuple[str, ...]) -> tuple[str, str | None]:
     """Fields of the distance and of the transect's name (None without); ``needed``: fields that INPUT must have."""
-    found: dict[str, str] = {}
-    for key in ("DISTANCE", "TRANSECT_FIELD"):
-        usual = values.keys[key].default
-        name = values.raw(key) or usual
-        if source.fields().lookupField(name) >= 0:
-            found[key] = name
-        elif name != usual or key == "DISTANCE":
-            raise DownwarpError("{key}: INPUT has no field {name!r}.", key=key, name=name)
+    found = fields_in_use(values, source, ("DISTANCE", "TRANSECT_FIELD"))
     for name in needed:
         if source.fields().lookupField(name) < 0:
             raise DownwarpError(

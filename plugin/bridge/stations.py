@@ -16,16 +16,23 @@ from .picks import number_of
 from .runs import Item, Progress
 
 
-def field_names(values: Values, source: QgsFeatureSource) -> dict[str, str]:
-    """Fields in use by key. A key left blank means its usual field, where INPUT has it; DISTANCE must be there."""
+def fields_in_use(values: Values, source: QgsFeatureSource, keys: tuple[str, ...]) -> dict[str, str]:
+    """Fields by key. A key left blank means its usual field, where INPUT has it; DISTANCE must be there."""
     names = {}
-    for key in ("DISTANCE", "LOAD_FIELD", "OBSERVED_FIELD", "SIGMA_FIELD", "TRANSECT_FIELD"):
+    for key in keys:
         usual = values.keys[key].default
         name = values.raw(key) or usual
         if source.fields().lookupField(name) >= 0:
             names[key] = name
         elif name != usual or key == "DISTANCE":
             raise DownwarpError("{key}: INPUT has no field {name!r}.", key=key, name=name)
+    return names
+
+
+def field_names(values: Values, source: QgsFeatureSource) -> dict[str, str]:
+    """Fields in use by the keys of a fit, which takes a load, an observed surface or both."""
+    keys = ("DISTANCE", "LOAD_FIELD", "OBSERVED_FIELD", "SIGMA_FIELD", "TRANSECT_FIELD")
+    names = fields_in_use(values, source, keys)
     if "LOAD_FIELD" not in names and "OBSERVED_FIELD" not in names:
         raise DownwarpError("INPUT has neither the field of LOAD_FIELD nor that of OBSERVED_FIELD; the fit takes one.")
     return names
